@@ -1,0 +1,1 @@
+"""Compiled numerics: serial, cached, without the GIL; callers put threads above them."""
