@@ -69,11 +69,9 @@ class _Block(NamedTuple):
 
 @lru_cache(maxsize=1)
 def _timescale() -> Any:
-    from skyfield.timelib import Timescale
     from skyfield.api import load
 
-    timescale: Timescale = load.timescale(builtin=True)
-    return timescale
+    return load.timescale(builtin=True)
 
 
 @lru_cache(maxsize=1)
@@ -128,8 +126,22 @@ def check_date(instant: datetime, field: str) -> None:
         raise InputError(field, instant.isoformat(), _accepted_dates())
 
 
+def check_year(utc: NDArray[np.datetime64], field: str) -> None:
+    """Refuse dates outside the ephemeris, to the year, for ``datetime64`` times of any unit.
+
+    Raises
+    ------
+    InputError
+        Naming `field` and the range of dates.
+    """
+    years = utc.astype("datetime64[Y]").astype(np.int64) + 1970
+    outside = (years < FIRST_DATE.year) | (years > LAST_DATE.year)
+    if outside.any():
+        raise InputError(field, str(utc[int(np.argmax(outside))]), _accepted_dates())
+
+
 def check_tai(first_us: int, last_us: int, field: str) -> None:
-    """The same check for a span of TAI microseconds.
+    """Refuse a span of TAI microseconds that leaves the ephemeris.
 
     Raises
     ------
@@ -205,7 +217,7 @@ def _wrapped(angle: Array) -> Array:
 
 
 def _uniform_angle(tai_us: Microseconds) -> Array:
-    """The Earth rotation angle if UT1 were TAI, in radians: what is left over varies slowly."""
+    """Earth rotation angle if UT1 were TAI, in radians: what is left over varies slowly."""
     since = tai_us - _J2000_US
     turns = (since % _DAY_US) / _DAY_US + _ERA_EXTRA_TURNS_PER_DAY * (since / _DAY_US) + _ERA_AT_J2000_TURNS
     return np.asarray(2.0 * np.pi * (turns % 1.0))
@@ -308,5 +320,3 @@ def sun_right_ascension_deg(instant: datetime, sun: str) -> float:
     interpolate_six(tai, _FRAME_STEP_US, first, nodes, out)
     ut1_turns = ((int(tai[0]) % _DAY_US) / _SECOND_US + out[0, 11]) / 86_400.0
     return float((np.degrees(frame.gast_rad[0]) - 360.0 * ut1_turns + 180.0) % 360.0)
-
-

@@ -44,12 +44,12 @@ class Shadow(Definition):
 
     @property
     def radius_km(self) -> float:
-        """Radius of the opaque planet at its equator. [km]"""
+        """Radius of the opaque planet at its equator. [km]."""
         return EARTH.radius_km + self.atmosphere_km
 
     @property
     def stretch(self) -> float:
-        """Factor along the pole that turns the opaque planet into a sphere. [1]"""
+        """Factor along the pole that turns the opaque planet into a sphere. [1]."""
         return 1.0 / (1.0 - EARTH.flattening) if self.oblate else 1.0
 
 
@@ -113,12 +113,11 @@ def visible_fraction(separation_rad: ArrayLike, sun_radius_rad: ArrayLike, body_
     ----------
     Montenbruck and Gill, *Satellite Orbits* (2000), section 3.4.2; rearranged here for rounding.
     """
-    arrays = np.broadcast_arrays(
-        np.asarray(separation_rad, float), np.asarray(sun_radius_rad, float), np.asarray(body_radius_rad, float)
-    )
-    out = np.empty(arrays[0].size)
-    _visible_all(*(np.ascontiguousarray(a).reshape(-1) for a in arrays), out)
-    return out.reshape(arrays[0].shape)
+    given = (np.asarray(value, np.float64) for value in (separation_rad, sun_radius_rad, body_radius_rad))
+    separation, sun, body = (np.array(value) for value in np.broadcast_arrays(*given))
+    out = np.empty(separation.size)
+    _visible_all(separation.reshape(-1), sun.reshape(-1), body.reshape(-1), out)
+    return out.reshape(separation.shape)
 
 
 @compiled
