@@ -188,7 +188,9 @@ def _sentence(detail: ErrorDetails, model: type[BaseModel]) -> InputError:
         names = [tag_name.strip(" '") for tag_name in known.split(",")] if known else _tags(path, model)
         return InputError(f"{field}.{tag}", given, f"one of: {', '.join(names)}{did_you_mean(str(given), names)}")
     if kind == "literal_error":
-        hint = did_you_mean(str(value), [word.strip(" '") for word in str(context["expected"]).replace(" or ", ",").split(",")])
+        hint = did_you_mean(
+            str(value), [word.strip(" '") for word in str(context["expected"]).replace(" or ", ",").split(",")]
+        )
         return InputError(field, value, f"{context['expected']}{hint}")
     if kind in _LIMITS:
         return InputError(field, value, _range(path, model) or _limit(kind, context))

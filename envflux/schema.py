@@ -124,8 +124,9 @@ def stamp(dataset: xr.Dataset, *, cell_methods: str | None = "time: point", **at
 
 
 def extend_history(dataset: xr.Dataset, step: str) -> str:
-    """The ``history`` of `dataset` with one more step, newest last. It holds no clock time:
-    the same input must give the same file.
+    """The ``history`` of `dataset` with one more step, newest last.
+
+    It holds no clock time: the same input must give the same file.
     """
     past = str(dataset.attrs.get("history", ""))
     return f"{past}\n{step}" if past else step

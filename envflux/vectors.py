@@ -23,7 +23,8 @@ AXES: dict[str, tuple[float, float, float]] = {
 
 def dot(a: ArrayLike, b: ArrayLike) -> Array:
     """Scalar product along the last axis."""
-    return np.einsum("...i,...i->...", np.asarray(a, float), np.asarray(b, float))
+    product: Array = np.einsum("...i,...i->...", np.asarray(a, float), np.asarray(b, float))
+    return product
 
 
 def norm(a: ArrayLike) -> Array:
@@ -35,7 +36,8 @@ def unit(a: ArrayLike) -> Array:
     """`a` scaled to length 1. A zero vector comes back as NaN: callers refuse it beforehand."""
     a = np.asarray(a, float)
     with np.errstate(invalid="ignore", divide="ignore"):
-        return a / norm(a)[..., None]
+        scaled: Array = a / norm(a)[..., None]
+    return scaled
 
 
 def angle_between(a: ArrayLike, b: ArrayLike) -> Array:
@@ -51,21 +53,23 @@ def angle_between(a: ArrayLike, b: ArrayLike) -> Array:
 def perpendicular(a: ArrayLike, axis: ArrayLike) -> Array:
     """The part of `a` at right angles to the unit vector `axis` (not normalised)."""
     a, axis = np.asarray(a, float), np.asarray(axis, float)
-    return a - dot(a, axis)[..., None] * axis
+    rest: Array = a - dot(a, axis)[..., None] * axis
+    return rest
 
 
 def rotation_about(axis: ArrayLike, angle_rad: ArrayLike) -> Array:
     """Right-handed rotation matrices about `axis` (..., 3) by `angle_rad` (...); Rodrigues' formula."""
     u = unit(axis)
     angle = np.asarray(angle_rad, float)
-    u = np.broadcast_to(u, angle.shape + (3,)) if u.ndim == 1 else u
+    u = np.broadcast_to(u, (*angle.shape, 3)) if u.ndim == 1 else u
     c, s = np.cos(angle), np.sin(angle)
-    cross = np.zeros(u.shape[:-1] + (3, 3))
+    cross = np.zeros((*u.shape[:-1], 3, 3))
     cross[..., 0, 1], cross[..., 0, 2] = -u[..., 2], u[..., 1]
     cross[..., 1, 0], cross[..., 1, 2] = u[..., 2], -u[..., 0]
     cross[..., 2, 0], cross[..., 2, 1] = -u[..., 1], u[..., 0]
     outer = u[..., :, None] * u[..., None, :]
-    return c[..., None, None] * np.eye(3) + s[..., None, None] * cross + (1.0 - c)[..., None, None] * outer
+    matrix: Array = c[..., None, None] * np.eye(3) + s[..., None, None] * cross + (1.0 - c)[..., None, None] * outer
+    return matrix
 
 
 def rotation_from_quaternion(quaternion_wxyz: ArrayLike) -> Array:
