@@ -211,8 +211,8 @@ def test_projected_area_is_the_shadow_of_a_convex_body(seed: int, count: int) ->
 
 
 def test_mean_shadow_of_a_convex_body_is_a_quarter_of_its_surface() -> None:
-    # Cauchy's theorem. 400 000 random directions leave a standard error of about 1.3e-4, since the shadow
-    # of this body varies by some 8 % of its mean.
+    # Cauchy's theorem. 400 000 random directions leave a standard error of 2.1e-4, three of which are allowed: the
+    # shadow of this body varies by 13 % of its mean.
     rng = np.random.default_rng(7)
     craft, hull = polyhedron(rng.normal(size=(30, 3)))
     mean = craft.projected_area_m2(rng.normal(size=(400_000, 3))).mean()
