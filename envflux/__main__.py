@@ -1,0 +1,10 @@
+"""`python -m envflux` does what the command `envflux` does, also where the path of the environment has spaces."""
+
+from __future__ import annotations
+
+import sys
+
+from envflux.cli import main
+
+if __name__ == "__main__":
+    sys.exit(main())
