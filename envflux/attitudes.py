@@ -16,7 +16,8 @@ from pydantic import Field, field_validator, model_validator
 from envflux.craft import checked_direction, unit_direction
 from envflux.definitions import Definition, Listed, Vector3
 from envflux.errors import InputError
-from envflux.vectors import Array, dot, norm, perpendicular, rotation_about, rotation_from_axes, unit
+from envflux.kernels.frames import nadir_rotations
+from envflux.vectors import Array, cross, dot, norm, perpendicular, rotation_about, rotation_from_axes, unit
 from envflux.vectors import rotation_from_quaternion as _rotation_from_quaternion
 
 # Below this angle (rad) two directions count as parallel. Rounding turns a direction that is known to 1e-16
@@ -73,11 +74,11 @@ def one_phase(rotations: Array) -> Orientation:
 
 
 def _vectors(track: xr.Dataset, name: str) -> Array:
-    return np.asarray(track[name].transpose("time", "xyz").values, float)
+    return np.ascontiguousarray(track[name].transpose("time", "xyz").values, float)
 
 
 def _orbit_normal(track: xr.Dataset) -> Array:
-    return unit(np.cross(_vectors(track, "position"), _vectors(track, "velocity")))
+    return unit(cross(_vectors(track, "position"), _vectors(track, "velocity")))
 
 
 def _orbit_noon(track: xr.Dataset, normal: Array) -> Array:
@@ -123,13 +124,12 @@ class NadirPointing(Definition):
 
     def orient(self, track: xr.Dataset) -> Orientation:
         """Give the body axes at each time of `track`."""
-        zenith = unit(_vectors(track, "position"))
-        normal = _orbit_normal(track)
-        level = rotation_from_axes(np.cross(normal, zenith), -normal, -zenith)
         yaw = rotation_about([0.0, 0.0, 1.0], math.radians(self.yaw_deg))
         pitch = rotation_about([0.0, 1.0, 0.0], math.radians(self.pitch_deg))
         roll = rotation_about([1.0, 0.0, 0.0], math.radians(self.roll_deg))
-        return one_phase(level @ (yaw @ pitch @ roll))
+        rotations = np.empty((track.sizes["time"], 3, 3))
+        nadir_rotations(_vectors(track, "position"), _vectors(track, "velocity"), yaw @ pitch @ roll, rotations)
+        return one_phase(rotations)
 
 
 class InertialAttitude(Definition):
@@ -219,7 +219,7 @@ class SunPointing(Definition):
 
     @model_validator(mode="after")
     def _axes_differ(self) -> Self:
-        across = np.cross(unit_direction(self.axis), unit_direction(self.clock_axis))
+        across = cross(unit_direction(self.axis), unit_direction(self.clock_axis))
         if norm(across) <= _PARALLEL_RAD:
             raise InputError("clock_axis", self.clock_axis, f"not parallel to axis, {self.axis}")
         return self
@@ -235,7 +235,7 @@ def _axes_from(first: Array, second: Array) -> Array:
     """Rotation matrices whose columns are `first`, the part of `second` across it, and their cross product."""
     # Twice, since one pass leaves rounding over the sine of the angle between the two.
     across = unit(perpendicular(unit(perpendicular(second, first)), first))
-    return rotation_from_axes(first, across, np.cross(first, across))
+    return rotation_from_axes(first, across, cross(first, across))
 
 
 def _turned_toward(toward: Toward, track: xr.Dataset, sun: Array) -> Array:
@@ -393,7 +393,7 @@ class Spinning(Definition):
 
 def _smallest_turn(start: Array, end: Array, half_turn_axis: Array) -> Array:
     """Rotation by the smallest angle from the unit vector `start` to `end`; half a turn where they are opposite."""
-    across = np.cross(start, end)
+    across = cross(start, end)
     sine, cosine = float(norm(across)), float(dot(start, end))
     if sine <= 1e-9 and cosine < 0.0:
         across = perpendicular(half_turn_axis, start)

@@ -28,7 +28,7 @@ from envflux.vectors import Array, dot
 
 # Times handed to a kernel at once: long enough that Python's share vanishes, short enough that the
 # rotation matrices of a long track (72 bytes a time and phase) never exist all together.
-_CHUNK = 8192
+_CHUNK = 16384
 
 _ORTHONORMAL = 1e-6
 

@@ -7,6 +7,7 @@ samples the integrand has a corner, which the face's incidence angle locates.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -53,18 +54,22 @@ def orbit_mean(dataset: xr.Dataset) -> xr.Dataset:
     Trapezoid rule in time between samples, with both end samples of each revolution, and with the
     cosine's zero put where the Sun crosses a face's plane.
     """
-    grid = _revolutions(dataset)
+    revolutions = _revolutions(dataset)
+    blocks = list(revolutions.blocks())
     reduced: dict[str, tuple[tuple[str, ...], Array]] = {}
     for key, variable in dataset.data_vars.items():
         name = str(key)
         if "time" not in variable.dims or name in _WITHOUT_MEAN or variable.dtype.kind != "f":
             continue
         values = variable.transpose("time", ...).values
-        areas = grid.integrate(values) + _corners(dataset, name, values, grid)
-        reduced[name] = (("rev", *(str(dim) for dim in variable.dims if dim != "time")), grid.mean(areas))
+        means = [
+            block.mean(block.integrate(values[block.samples]) + _corners(dataset, name, values, block))
+            for block in blocks
+        ]
+        reduced[name] = (("rev", *(str(dim) for dim in variable.dims if dim != "time")), np.concatenate(means))
     kept = [name for name, coordinate in dataset.coords.items() if "time" not in coordinate.dims]
     result = xr.Dataset(reduced, coords={name: dataset.coords[name] for name in kept}, attrs=dataset.attrs)
-    result = result.assign_coords(rev=("rev", np.arange(grid.count)))
+    result = result.assign_coords(rev=("rev", np.arange(revolutions.count)))
     result = schema.stamp(
         result,
         cell_methods="time: mean",
@@ -176,14 +181,20 @@ def energy_closure(dataset: xr.Dataset) -> xr.Dataset:
     return schema.stamp(result)
 
 
+# Samples worked on at once: arrays over a long track and all faces exist one at a time, and only once.
+_BLOCK = 1 << 16
+
+
 @dataclass(frozen=True)
 class _Revolutions:
-    """Where whole revolutions begin and end among the samples of a dataset.
+    """Where whole revolutions begin and end among samples.
 
-    `at` holds the index of the sample on each edge, or of the one before it; `beyond` the seconds
-    from that sample to the edge, zero where a sample is on it (always so for an orbit's own track).
+    `samples` says which samples of the dataset these are, `step_s` the time between neighbours. `at`
+    holds the index of the sample on each edge, or of the one before it; `beyond` the seconds from
+    that sample to the edge, zero where a sample is on it (always so for an orbit's own track).
     """
 
+    samples: slice
     step_s: Array
     at: np.ndarray
     beyond: Array
@@ -192,6 +203,23 @@ class _Revolutions:
     @property
     def count(self) -> int:
         return len(self.span_s)
+
+    def blocks(self) -> Iterator[_Revolutions]:
+        """The same revolutions in runs of a bounded number of samples, at least one revolution each."""
+        first = 0
+        while first < self.count:
+            last = max(first + 1, int(np.searchsorted(self.at, self.at[first] + _BLOCK, side="right")) - 1)
+            last = min(last, self.count)
+            start, stop = self.at[first], min(self.at[last] + 2, len(self.step_s) + 1)
+            edges = slice(first, last + 1)
+            yield _Revolutions(
+                slice(start, stop),
+                self.step_s[start : stop - 1],
+                self.at[edges] - start,
+                self.beyond[edges],
+                self.span_s[first:last],
+            )
+            first = last
 
     def integrate(self, values: Array) -> Array:
         """Areas between neighbouring samples, by the trapezoid rule."""
@@ -222,28 +250,32 @@ def _revolutions(dataset: xr.Dataset) -> _Revolutions:
     on_sample = elapsed[np.minimum(nearest, elapsed.size - 1)] - edges <= _ON_EDGE_S
     at = np.where(on_sample, nearest, nearest - 1)
     beyond = np.where(on_sample, 0.0, edges - elapsed[at])
-    return _Revolutions(np.diff(elapsed), at, beyond, np.diff(elapsed[at] + beyond))
+    return _Revolutions(slice(0, elapsed.size), np.diff(elapsed), at, beyond, np.diff(elapsed[at] + beyond))
 
 
-def _corners(dataset: xr.Dataset, name: str, values: Array, grid: _Revolutions) -> Array | float:
+def _corners(dataset: xr.Dataset, name: str, values: Array, block: _Revolutions) -> Array | float:
     """What the trapezoid rule gets wrong where the Sun crosses a face's plane between two samples."""
     kind = _WITH_CORNER.get(name)
     if kind is None or "sun_incidence" not in dataset:
         return 0.0
-    cosine = np.cos(np.radians(dataset.sun_incidence.transpose("time", "face").values))
+    cosine = np.cos(np.radians(dataset.sun_incidence.transpose("time", "face").values[block.samples]))
     before, after = cosine[:-1], cosine[1:]
     crossing = before * after < 0.0
     if not crossing.any():
         return 0.0
     if name == "absorbed_flux":
-        values = dataset.solar_flux.transpose("time", "face").values * dataset.absorptance.values
+        # Of what is absorbed only the direct sunlight has the corner.
+        sunlight = dataset.solar_flux.transpose("time", "face").values[block.samples]
+        part = sunlight * dataset.absorptance.values
+    else:
+        part = values[block.samples]
     rises = after > 0.0
-    lit = np.where(rises, values[1:], values[:-1])
-    dark = np.where(rises, values[:-1], values[1:])
+    lit = np.where(rises, part[1:], part[:-1])
+    dark = np.where(rises, part[:-1], part[1:])
     # An average over phases has no corner: it is not zero on the side turned away.
     crossing &= dark == 0.0
     with np.errstate(invalid="ignore", divide="ignore"):
         share = np.where(rises, after, before) / (np.abs(before) + np.abs(after))
-    counted = 0.5 * grid.step_s[:, None] * lit
+    counted = 0.5 * block.step_s[:, None] * lit
     true = counted * share * (2.0 if kind == "jumps" else 1.0)
     return np.where(crossing, true - counted, 0.0)
