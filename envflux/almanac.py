@@ -235,18 +235,32 @@ def _gmst_1982(tai_us: Microseconds, ut1_minus_tai_s: Array) -> Array:
     return np.asarray((angle_s % 86_400.0) * (2.0 * np.pi / 86_400.0))
 
 
-def _nodes(tai_us: Microseconds, step_us: int, sun: bool) -> tuple[int, Array]:
-    """Index of the first node and all nodes needed around the given times."""
+def _interpolated(tai_us: Microseconds, step_us: int, columns: int, *, sun: bool) -> Array:
+    """Values of the Sun's or the frame's nodes at the given times, shape (n, columns)."""
+    out = np.empty((tai_us.size, columns))
+    if not tai_us.size:
+        return out
     first_node, last_node = int(tai_us.min()) // step_us - 2, int(tai_us.max()) // step_us + 3
     per_block = _BLOCK_US // step_us
     wanted = range(first_node // per_block, last_node // per_block + 1)
+    if len(wanted) > 8:
+        # A few dates scattered over decades must not cost all the nodes between them.
+        block = tai_us // _BLOCK_US
+        held = np.unique(block)
+        if 3 * held.size < len(wanted):
+            for index in held:
+                rows = block == index
+                out[rows] = _interpolated(tai_us[rows], step_us, columns, sun=sun)
+            return out
     with _lock:
         missing = [index for index in wanted if index not in _blocks]
         if missing:
             _compute_blocks(missing)
         found = [_blocks[index] for index in wanted]
-    rows = [block.sun if sun else block.frame for block in found]
-    return wanted[0] * per_block, rows[0] if len(rows) == 1 else np.concatenate(rows)
+    parts = [block.sun if sun else block.frame for block in found]
+    nodes = parts[0] if len(parts) == 1 else np.concatenate(parts)
+    interpolate_six(tai_us, step_us, wanted[0] * per_block, nodes, out)
+    return out
 
 
 # -- what the rest of the house asks --------------------------------------------------------------------
@@ -269,12 +283,7 @@ def sun_vector_au(tai_us: Microseconds) -> Array:
     ----------
     Folkner, Williams and Boggs, *The Planetary and Lunar Ephemeris DE 421*, IPN Progress Report 42-178 (2009).
     """
-    tai_us = np.asarray(tai_us, np.int64)
-    out = np.empty((tai_us.size, 3))
-    if tai_us.size:
-        first, nodes = _nodes(tai_us, _SUN_STEP_US, True)
-        interpolate_six(tai_us, _SUN_STEP_US, first, nodes, out)
-    return out
+    return _interpolated(np.asarray(tai_us, np.int64), _SUN_STEP_US, 3, sun=True)
 
 
 def earth_frame(tai_us: Microseconds) -> Frame:
@@ -286,10 +295,7 @@ def earth_frame(tai_us: Microseconds) -> Frame:
         TAI microseconds since 1970. [us]
     """
     tai_us = np.asarray(tai_us, np.int64)
-    out = np.empty((tai_us.size, 12))
-    if tai_us.size:
-        first, nodes = _nodes(tai_us, _FRAME_STEP_US, False)
-        interpolate_six(tai_us, _FRAME_STEP_US, first, nodes, out)
+    out = _interpolated(tai_us, _FRAME_STEP_US, 12, sun=False)
     gast = (out[:, 9] + _uniform_angle(tai_us)) % (2.0 * np.pi)
     return Frame(out[:, :9], gast, out[:, 10])
 
@@ -315,8 +321,6 @@ def sun_right_ascension_deg(instant: datetime, sun: str) -> float:
     if sun == "apparent":
         x, y, _ = frame.matrix[0].reshape(3, 3) @ sun_vector_au(tai)[0]
         return float(np.degrees(np.arctan2(y, x)) % 360.0)
-    first, nodes = _nodes(tai, _FRAME_STEP_US, False)
-    out = np.empty((1, 12))
-    interpolate_six(tai, _FRAME_STEP_US, first, nodes, out)
-    ut1_turns = ((int(tai[0]) % _DAY_US) / _SECOND_US + out[0, 11]) / 86_400.0
+    ut1_minus_tai_s = _interpolated(tai, _FRAME_STEP_US, 12, sun=False)[0, 11]
+    ut1_turns = ((int(tai[0]) % _DAY_US) / _SECOND_US + ut1_minus_tai_s) / 86_400.0
     return float((np.degrees(frame.gast_rad[0]) - 360.0 * ut1_turns + 180.0) % 360.0)

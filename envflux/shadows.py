@@ -16,7 +16,7 @@ from pydantic import Field
 
 from envflux.constants import AU_KM, SUN_RADIUS_KM
 from envflux.definitions import Definition
-from envflux.kernels.interpolation import compiled
+from envflux.kernels.compiling import compiled
 from envflux.planets import EARTH
 
 Array = NDArray[np.float64]

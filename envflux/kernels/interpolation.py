@@ -6,19 +6,10 @@ Six nodes around the date, and nothing else, give the same bits whatever the chu
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from typing import Any, TypeVar, cast
-
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
-Function = TypeVar("Function", bound=Callable[..., Any])
-
-
-def compiled(function: Function) -> Function:
-    """Compile to machine code, kept on disk; serial and without the GIL."""
-    return cast(Function, njit(cache=True, nogil=True)(function))
+from envflux.kernels.compiling import compiled
 
 
 @compiled

@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from envflux.constants import AU_KM
-from envflux.kernels.interpolation import compiled
+from envflux.kernels.compiling import compiled
 from envflux.orbits.states import State
 from envflux.planets import EARTH
 from envflux.vectors import dot, norm, perpendicular

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from envflux.constants import SECONDS_PER_DAY, TROPICAL_YEAR_DAYS
-from envflux.kernels.interpolation import compiled
+from envflux.kernels.compiling import compiled
 from envflux.planets import EARTH, Planet
 
 Array = NDArray[np.float64]

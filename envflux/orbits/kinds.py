@@ -23,6 +23,7 @@ from envflux.orbits.elements import (
 from envflux.orbits.grids import Pace
 from envflux.orbits.states import ElementStates, NoonStates
 from envflux.orbits.tracks import Trackable, dated_start
+from envflux.orbits.wording import MISSING
 from envflux.planets import EARTH
 
 LOWEST_KM = 100.0  # below, no orbit lasts a revolution
@@ -111,12 +112,10 @@ class KeplerOrbit(_ElementOrbit):
         if self.semi_major_axis_km is not None and (low is not None or high is not None):
             raise InputError("semi_major_axis_km", self.semi_major_axis_km, "left out where altitudes are given")
         if self.semi_major_axis_km is None and low is None and high is None:
-            raise InputError(
-                "semi_major_axis_km", "missing", "given, or both perigee_altitude_km and apogee_altitude_km"
-            )
+            raise InputError("semi_major_axis_km", MISSING, "given, or both perigee_altitude_km and apogee_altitude_km")
         if self.semi_major_axis_km is None and (low is None or high is None):
             absent = "perigee_altitude_km" if low is None else "apogee_altitude_km"
-            raise InputError(absent, "missing", "given together with the other altitude")
+            raise InputError(absent, MISSING, "given together with the other altitude")
         if low is not None and high is not None and low > high:
             raise InputError("perigee_altitude_km", low, f"at most apogee_altitude_km, {high:g}")
         if low is not None and self.eccentricity is not None:
@@ -251,7 +250,7 @@ class SunSynchronousOrbit(_ElementOrbit):
         almanac.check_date(self.epoch, "epoch")
         if (self.ltan_hours is None) == (self.ltdn_hours is None):
             if self.ltan_hours is None:
-                raise InputError("ltan_hours", "missing", "given, or ltdn_hours in its place")
+                raise InputError("ltan_hours", MISSING, "given, or ltdn_hours in its place")
             raise InputError("ltdn_hours", self.ltdn_hours, "left out where ltan_hours is given")
         if sun_synchronous_cosine(EARTH.radius_km + self.altitude_km) < -1.0:
             limit = math.floor(sun_synchronous_limit_km() - EARTH.radius_km)

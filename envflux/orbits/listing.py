@@ -20,6 +20,7 @@ from envflux.orbits.contacts import (
     find_contacts,
 )
 from envflux.orbits.states import SampledStates
+from envflux.orbits.wording import Told
 from envflux.schema import extend_history, stamp
 from envflux.shadows import Shadow
 
@@ -63,7 +64,7 @@ def eclipses(track: xr.Dataset) -> xr.Dataset:
     missing = [name for name in _NEEDED if name not in track]
     if missing or "time" not in track.dims:
         raise InputError(
-            "track", f"a Dataset without {', '.join(missing) or 'time'}", "a track, as orbit.track() makes it"
+            "track", Told(f"a Dataset without {', '.join(missing) or 'time'}"), "a track, as orbit.track() makes it"
         )
     clock = track["time"].values
     dated = clock.dtype.kind == "M"

@@ -9,6 +9,7 @@ from pathlib import Path
 from xml.etree import ElementTree as ET
 
 from envflux.errors import InputError
+from envflux.orbits.wording import MISSING
 
 _LARGEST_BYTES = 1_000_000
 
@@ -144,7 +145,7 @@ def _fields(record: dict[str, str]) -> dict[str, object]:
         if key not in record:
             if key in _OPTIONAL:
                 continue
-            raise InputError(key, "missing", "in the message")
+            raise InputError(key, MISSING, "in the message")
         try:
             fields[name] = float(record[key])
         except ValueError:
@@ -168,4 +169,4 @@ def _epoch(text: str) -> datetime:
         within = timedelta(hours=int(hour), minutes=int(minute), seconds=int(second))
         return date + within + timedelta(microseconds=round(float(f"0.{fraction or 0}") * 1e6))
     except (ValueError, OverflowError):
-        raise InputError("EPOCH", text or "missing", "a time such as 2031-03-20T06:00:00.000000") from None
+        raise InputError("EPOCH", text or MISSING, "a time such as 2031-03-20T06:00:00.000000") from None

@@ -15,6 +15,7 @@ from envflux.errors import InputError
 from envflux.orbits.elements import osculating_period_s
 from envflux.orbits.states import SampledStates
 from envflux.orbits.tracks import assemble
+from envflux.orbits.wording import MISSING, Told
 from envflux.shadows import Shadow
 
 Array = NDArray[np.float64]
@@ -73,11 +74,13 @@ def track_from_arrays(
     if shadow.oblate and not dated:
         raise InputError("shadow.oblate", True, "false: undated times do not say where the pole is")
     if np.any(np.einsum("ij,ij->i", np.cross(position, velocity), np.cross(position, velocity)) == 0.0):
-        raise InputError("velocity_km_s", "along the position at a sample", "across it: the orbit plane is undefined")
+        raise InputError(
+            "velocity_km_s", Told("along the position at a sample"), "across it: the orbit plane is undefined"
+        )
     if period_s is None:
         period_s = osculating_period_s(position[0], velocity[0])
         if math.isnan(period_s):
-            raise InputError("period_s", "missing", "given: the first state is on an open path without a period")
+            raise InputError("period_s", MISSING, "given: the first state is on an open path without a period")
     elif isinstance(period_s, bool) or not math.isfinite(period_s) or period_s <= 0.0:
         raise InputError("period_s", period_s, "a number above 0")
     span_s = (times_us[-1] - times_us[0]) * 1e-6
@@ -101,11 +104,11 @@ def _clock(time: ArrayLike) -> tuple[Any, NDArray[np.int64], bool]:
     accepted = "an array of datetime64 (UTC) or timedelta64, strictly increasing"
     values = np.asarray(time)
     if values.dtype.kind not in "Mm":
-        raise InputError("time", f"of type {values.dtype}", accepted)
+        raise InputError("time", Told(f"of type {values.dtype}"), accepted)
     if values.ndim != 1 or values.size == 0:
-        raise InputError("time", f"of shape {values.shape}", f"{accepted}, of shape (n,)")
+        raise InputError("time", Told(f"of shape {values.shape}"), f"{accepted}, of shape (n,)")
     if np.isnat(values).any():
-        raise InputError("time", "not a time at a sample", accepted)
+        raise InputError("time", Told("not a time at a sample"), accepted)
     dated = values.dtype.kind == "M"
     if dated:
         # Checked before the conversion to nanoseconds, which cannot hold far dates.
@@ -118,7 +121,7 @@ def _clock(time: ArrayLike) -> tuple[Any, NDArray[np.int64], bool]:
         clock = (times_us * 1000).view("timedelta64[ns]")
     if np.any(np.diff(times_us) <= 0):
         i = int(np.flatnonzero(np.diff(times_us) <= 0)[0])
-        raise InputError("time", f"not later at sample {i + 2} than at sample {i + 1}", "strictly increasing")
+        raise InputError("time", Told(f"not later at sample {i + 2} than at sample {i + 1}"), "strictly increasing")
     return clock, times_us, dated
 
 
@@ -126,30 +129,30 @@ def _table(field: str, value: ArrayLike, n: int) -> Array:
     try:
         table = np.array(value, dtype=float, ndmin=1)
     except (TypeError, ValueError):
-        raise InputError(field, "not an array of numbers", f"an array of shape ({n}, 3)") from None
+        raise InputError(field, Told("not an array of numbers"), f"an array of shape ({n}, 3)") from None
     if table.shape != (n, 3):
-        raise InputError(field, f"of shape {table.shape}", f"of shape ({n}, 3), one row for each time")
+        raise InputError(field, Told(f"of shape {table.shape}"), f"of shape ({n}, 3), one row for each time")
     if not np.isfinite(table).all():
         row = int(np.flatnonzero(~np.isfinite(table).all(axis=1))[0])
-        raise InputError(field, f"not finite at sample {row + 1}", "finite throughout")
+        raise InputError(field, Told(f"not finite at sample {row + 1}"), "finite throughout")
     return np.ascontiguousarray(table)
 
 
 def _sun(direction: ArrayLike | None, distance: ArrayLike | None, n: int, *, dated: bool) -> Array | None:
     if direction is None:
         if not dated:
-            raise InputError("sun_direction", "missing", "given: times without a calendar do not say where the Sun is")
+            raise InputError("sun_direction", MISSING, "given: times without a calendar do not say where the Sun is")
         if distance is not None:
-            raise InputError("sun_distance_au", "given", "left out where sun_direction is")
+            raise InputError("sun_distance_au", Told("given"), "left out where sun_direction is")
         return None
     alone = np.shape(direction) == (3,)
     vectors = _table("sun_direction", np.tile(np.asarray(direction, float), (n, 1)) if alone else direction, n)
     length = np.sqrt(np.einsum("ij,ij->i", vectors, vectors))
     if not (length > 0.0).all():
-        raise InputError("sun_direction", "zero at a sample", "a vector of any length above 0")
+        raise InputError("sun_direction", Told("zero at a sample"), "a vector of any length above 0")
     au = np.asarray(1.0 if distance is None else distance, dtype=float)
     if au.shape not in ((), (n,)):
-        raise InputError("sun_distance_au", f"of shape {au.shape}", f"one number, or of shape ({n},)")
+        raise InputError("sun_distance_au", Told(f"of shape {au.shape}"), f"one number, or of shape ({n},)")
     if not (np.isfinite(au).all() and (au > 0.0).all()):
-        raise InputError("sun_distance_au", "not above 0 at a sample", "a finite number above 0 throughout")
+        raise InputError("sun_distance_au", Told("not above 0 at a sample"), "a finite number above 0 throughout")
     return np.asarray(vectors / length[:, None] * np.broadcast_to(au, (n,))[:, None])

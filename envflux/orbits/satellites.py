@@ -19,6 +19,7 @@ from envflux.orbits.grids import Pace
 from envflux.orbits.messages import read_message
 from envflux.orbits.states import Microseconds, State, apparent_sun, to_gcrs
 from envflux.orbits.tracks import Trackable, dated_start
+from envflux.orbits.wording import Told
 
 _LINE_LENGTH = 69
 _NUMBER_COLUMNS = {1: ((18, 20), (20, 32)), 2: ((8, 16), (17, 25), (26, 33), (34, 42), (43, 51), (52, 63))}
@@ -53,7 +54,7 @@ class SatelliteStates:
             reason = SGP4_ERRORS.get(int(codes[i]), f"code {int(codes[i])}")
             raise InputError(
                 self.field,
-                f"not usable {days[i]:+.2f} days from its epoch (SGP4: {reason})",
+                Told(f"not usable {days[i]:+.2f} days from its epoch (SGP4: {reason})"),
                 "a set of elements that SGP4 can follow over the whole track",
             )
         frame = almanac.earth_frame(times_us)
@@ -161,11 +162,11 @@ def _check_line(number: int, line: str) -> None:
     if not text.startswith(f"{number} "):
         raise InputError(field, line, f"the line of the element set that starts with '{number} '")
     if len(text) != _LINE_LENGTH or not text.isascii():
-        raise InputError(field, f"{len(text)} characters long", f"{_LINE_LENGTH} characters long")
+        raise InputError(field, Told(f"{len(text)} characters long"), f"{_LINE_LENGTH} characters long")
     total = sum(int(c) if c.isdigit() else c == "-" for c in text[:-1]) % 10
     if text[-1] != str(total):
         raise InputError(
-            field, f"a line whose checksum is {text[-1]}", f"one whose checksum is {total}: a digit is wrong"
+            field, Told(f"a line whose checksum is {text[-1]}"), f"one whose checksum is {total}: a digit is wrong"
         )
     for first, last in _NUMBER_COLUMNS[number]:
         try:

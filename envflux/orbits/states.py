@@ -13,8 +13,9 @@ from numpy.typing import NDArray
 
 from envflux import almanac
 from envflux.errors import InputError
-from envflux.kernels.interpolation import compiled
+from envflux.kernels.compiling import compiled
 from envflux.orbits.elements import Elements, propagate
+from envflux.orbits.wording import Told
 from envflux.planets import EARTH
 
 Array = NDArray[np.float64]
@@ -184,4 +185,4 @@ def refuse_underground(state: State, field: str, lowest_km: float) -> None:
     lowest = float(np.min(altitude))
     if not lowest >= lowest_km:
         where = "above the surface" if lowest_km == 0.0 else f"at least {lowest_km:g} km up"
-        raise InputError(field, f"an altitude of {lowest:.1f} km", f"{where} throughout the track")
+        raise InputError(field, Told(f"an altitude of {lowest:.1f} km"), f"{where} throughout the track")
