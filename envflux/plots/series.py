@@ -1,0 +1,271 @@
+"""Quantities along the orbit."""
+
+from __future__ import annotations
+
+import itertools
+import textwrap
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any, NamedTuple
+
+import numpy as np
+import xarray as xr
+
+from envflux.errors import InputError, did_you_mean
+from envflux.plots.drawing import (
+    HUES,
+    INK,
+    NAMES_FROM,
+    PANEL,
+    SHADE,
+    TEXT,
+    XAxis,
+    chosen_faces,
+    dress,
+    facts_line,
+    figure_title,
+    joined,
+    left_out_note,
+    line_style,
+    long_name,
+    minus,
+    new_axes,
+    place_panels,
+    pretty_units,
+    shadow_spans,
+    x_label,
+    x_values,
+)
+from envflux.schema import FLUXES
+from envflux.vectors import Array
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+
+    Panels = np.ndarray[Any, np.dtype[np.object_]]
+
+_LABEL_WIDTH, _LABEL_LINES = 18, 4  # characters, lines
+_SAME_CURVE = 2e-3  # curves closer than this part of the panel's height are drawn and named as one
+
+
+def flux_history(
+    ds: xr.Dataset,
+    faces: Sequence[str] | None = None,
+    component: str | None = None,
+    ax: Axes | Sequence[Axes] | None = None,
+    *,
+    against: XAxis = "time",
+    title: str | None = None,
+) -> Axes | Panels:
+    """Draw the fluxes on each face along the orbit, with the eclipses shaded.
+
+    Parameters
+    ----------
+    ds : xarray.Dataset
+        What `flux` returns.
+    faces : sequence of str, optional
+        Names of the faces to draw; all of them by default, the twelve with the highest peaks of
+        absorbed flux where there are more.
+    component : str, optional
+        One of ``solar_flux``, ``albedo_flux``, ``planetary_ir_flux``, ``absorbed_flux``. By
+        default all four, one panel each.
+    ax : matplotlib Axes, optional
+        Where to draw: one Axes for one component, four for all. A new figure by default.
+    against : {"time", "orbit angle"}
+        What runs along the bottom. The orbit angle is counted from orbit noon, along the motion.
+    title : str, optional
+        Headline of a new figure.
+
+    Returns
+    -------
+    matplotlib Axes, or array of four
+        Flux per face area in W m-2.
+
+    Raises
+    ------
+    InputError
+        If a face or a component is unknown.
+    """
+    shown = chosen_faces(ds, faces)
+    if component is not None:
+        name = _component(component)
+        if ax is not None and not hasattr(ax, "plot"):
+            raise InputError("ax", type(ax).__name__, "one Axes when one component is drawn")
+        single: Any = ax if ax is not None else new_axes(9.0, 5.0)
+        _history_panel(single, ds, shown, name, against, eclipse_label=True)
+        single.set_xlabel(x_label(ds, against), fontsize=TEXT)
+        if ax is None:
+            single.set_title("", loc="left")
+            figure_title(
+                single, title or f"{long_name(ds, name)} on each face", facts_line(ds, left_out_note(ds, shown))
+            )
+        return single  # type: ignore[no-any-return]  # Any stands for an Axes here
+    panels: Panels
+    if ax is None:
+        panels = new_axes(13.33, 7.5, rows=2, columns=2, sharex=True)
+        bottom = panels[1]
+    else:
+        panels = np.asarray(ax, dtype=object)
+        if panels.size != len(FLUXES):
+            raise InputError("ax", f"{panels.size} Axes", f"{len(FLUXES)} Axes, or one with a component named")
+        bottom = panels.ravel()
+    for position, (panel, name) in enumerate(zip(panels.ravel(), FLUXES, strict=True)):
+        _history_panel(panel, ds, shown, name, against, eclipse_label=position == 0)
+    for panel in bottom:
+        panel.set_xlabel(x_label(ds, against), fontsize=TEXT)
+    if ax is None:
+        place_panels(panels, title or "Flux on each face", facts_line(ds, left_out_note(ds, shown)))
+    return panels
+
+
+def beta_history(track: xr.Dataset, ax: Axes | None = None, *, title: str | None = None) -> Axes:
+    """Draw the beta angle along a track, in degrees.
+
+    Parameters
+    ----------
+    track : xarray.Dataset
+        A track, or anything that carries its `beta`.
+    ax : matplotlib Axes, optional
+        Where to draw; a new figure by default.
+    title : str, optional
+        Headline of a new figure.
+
+    Returns
+    -------
+    matplotlib Axes
+    """
+    own_figure = ax is None
+    ax = ax if ax is not None else new_axes(9.0, 5.0)
+    x, beta = x_values(track, "time"), np.asarray(track["beta"].values, float)
+    ax.axhline(0.0, color=INK, linewidth=0.8)
+    ax.plot(x, beta, color=HUES[0], linewidth=2.0)
+    room = max(0.08 * float(np.ptp(beta)), 1.0)
+    ax.set_ylim(max(beta.min() - room, -95), min(beta.max() + room, 95))
+    dress(ax)
+    ax.set_xlim(x[0], x[-1])
+    ax.set_xlabel(x_label(track, "time"), fontsize=TEXT)
+    ax.set_ylabel("beta angle, °", fontsize=TEXT)
+    if own_figure:
+        figure_title(ax, title or "Beta angle: elevation of the Sun over the orbit plane", facts_line(track))
+    return ax
+
+
+def _history_panel(
+    ax: Axes, ds: xr.Dataset, faces: list[str], name: str, against: XAxis, *, eclipse_label: bool
+) -> None:
+    x = x_values(ds, against)
+    values = {face: np.asarray(ds[name].sel(face=face).values, float) for face in faces}
+    top = max((float(np.nanmax(v)) for v in values.values()), default=0.0)
+    top = top if top > 0 else 1.0
+    for kind, start, end in shadow_spans(ds, x):
+        ax.axvspan(start, end, color=SHADE[kind], linewidth=0, zorder=0)
+    order = {str(face): index for index, face in enumerate(ds["face"].values)}
+    ends = []
+    for group in _same_curves(values, _SAME_CURVE * top):
+        style = line_style(order[group[0]])
+        ax.plot(x, values[group[0]], linewidth=2.0, solid_capstyle="round", zorder=3, **style)
+        curve = values[group[0]]
+        ends.append(_End([minus(face) for face in group], float(curve[-1]), float(curve.max()), style))
+    ax.set_xlim(x[0], x[-1])
+    ax.set_ylim(-0.03 * top, 1.12 * top)
+    dress(ax)
+    if against == "orbit angle":
+        _angle_ticks(ax, x)
+    ax.set_ylabel(pretty_units(ds[name]), fontsize=TEXT)
+    ax.set_title(long_name(ds, name), fontsize=PANEL, loc="left", color=INK, weight="bold")
+    _label_ends(ax, ends)
+    if eclipse_label:
+        _label_eclipse(ax, shadow_spans(ds, x), x)
+
+
+class _End(NamedTuple):
+    names: list[str]
+    value: float
+    peak: float
+    style: dict[str, Any]
+
+
+def _label_ends(ax: Axes, ends: list[_End]) -> None:
+    """Name each line beside its right end, with a piece of the line; push names apart to be read."""
+    from matplotlib.lines import Line2D
+
+    low, high = ax.get_ylim()
+    height_in = ax.get_window_extent().height / ax.figure.dpi
+    gap = 1.28 * TEXT / 72.0 / (0.93 * height_in)
+    # Lines that end alike, as all do in eclipse, are ordered by how high they reach.
+    ends = sorted(ends, key=lambda end: (round((end.value - low) / (high - low) / gap), end.peak))
+    wanted = list(np.maximum.accumulate([(end.value - low) / (high - low) for end in ends]))
+    names = [_wrapped(end.names) for end in ends]
+    heights = [gap * (1 + name.count("\n")) for name in names]
+    for end, name, placed in zip(ends, names, _pushed_apart(wanted, heights), strict=True):
+        sample = Line2D([1.02, 1.075], [placed] * 2, transform=ax.transAxes, clip_on=False, linewidth=2.0, **end.style)
+        ax.add_artist(sample)
+        ax.text(
+            NAMES_FROM, placed, name, transform=ax.transAxes, fontsize=TEXT, va="center", color=INK, linespacing=1.12
+        )
+
+
+def _wrapped(names: list[str]) -> str:
+    """Join names over several short lines: a long one would take the panel's width."""
+    lines = textwrap.wrap(", ".join(name.replace(" ", "\u00a0") for name in names), _LABEL_WIDTH)
+    if len(lines) > _LABEL_LINES:
+        told = sum(line.count(", ") + 1 for line in (line.rstrip(",") for line in lines[: _LABEL_LINES - 1]))
+        lines = [*lines[: _LABEL_LINES - 1], f"and {len(names) - told} more"]
+    return "\n".join(lines)
+
+
+def _pushed_apart(wanted: list[float], heights: list[float]) -> list[float]:
+    """Find middles nearest to `wanted` (in rising order) at which labels of `heights` do not touch.
+
+    All stay within 0 to 1 if they fit; if not, they share what there is.
+    """
+    steps = [(one + other) / 2 for one, other in itertools.pairwise(heights)]
+    squeeze = min(1.0, 1.0 / sum(steps)) if steps else 1.0
+    offsets = [0.0, *itertools.accumulate(step * squeeze for step in steps)]
+    # Blocks of touching labels, each where its members on average want it (pool adjacent violators).
+    blocks: list[list[float]] = []  # [sum of what is wanted of the first, members]
+    for want, offset in zip(wanted, offsets, strict=True):
+        blocks.append([want - offset, 1.0])
+        while len(blocks) > 1 and blocks[-2][0] / blocks[-2][1] > blocks[-1][0] / blocks[-1][1]:
+            total, count = blocks.pop()
+            blocks[-1][0] += total
+            blocks[-1][1] += count
+    # Names of several lines would hang out at the ends.
+    lowest, highest = (heights[0] - min(heights)) / 2, 1.0 - offsets[-1] - (heights[-1] - min(heights)) / 2
+    starts = [
+        min(max(total / count, min(lowest, highest)), max(highest, 0.0))
+        for total, count in blocks
+        for _ in range(int(count))
+    ]
+    return [start + offset for start, offset in zip(starts, offsets, strict=True)]
+
+
+def _label_eclipse(ax: Axes, shadows: list[tuple[str, float, float]], x: Array) -> None:
+    wide = [(start, end) for _, start, end in joined(shadows) if end - start > 0.09 * (x[-1] - x[0])]
+    if wide:
+        middle = (wide[0][0] + wide[0][1]) / 2
+        place: dict[str, Any] = {"transform": ax.get_xaxis_transform(), "ha": "center", "va": "top"}
+        ax.text(middle, 0.985, "eclipse", fontsize=TEXT, color=INK, **place)
+
+
+def _angle_ticks(ax: Axes, x: Array) -> None:
+    step = 90.0 if x[-1] - x[0] <= 800 else 360.0
+    ax.set_xticks(np.arange(np.ceil(x[0] / step) * step, x[-1] + 1e-6, step))
+
+
+def _component(name: str) -> str:
+    for known in FLUXES:
+        if name in (known, known.removesuffix("_flux")):
+            return known
+    raise InputError("component", name, f"one of: {', '.join(FLUXES)}{did_you_mean(name, FLUXES)}")
+
+
+def _same_curves(values: dict[str, Array], tolerance: float) -> list[list[str]]:
+    groups: list[list[str]] = []
+    for face, curve in values.items():
+        for group in groups:
+            if float(np.nanmax(np.abs(values[group[0]] - curve))) <= tolerance:
+                group.append(face)
+                break
+        else:
+            groups.append([face])
+    return groups
