@@ -1,0 +1,152 @@
+"""From a mission file to a folder of results."""
+
+from __future__ import annotations
+
+import sys
+import warnings
+from pathlib import Path
+from typing import Any
+
+import xarray as xr
+from tqdm import tqdm
+
+from envflux.cli.folders import check_folder, check_names, results_folder
+from envflux.errors import EnvfluxWarning, InputError
+from envflux.missions import Mission, load_mission
+from envflux.tables import CAUTIONS, face_lines, orbit_lines, save, write_table
+
+_SUMMARY = "summary.txt"
+
+
+def run_mission(file: str, out: str, *, replace: bool = False) -> None:
+    """Compute every case of a mission file, write all files, and print the summary.
+
+    Parameters
+    ----------
+    file : str
+        The mission file.
+    out : str
+        Folder for the results.
+    replace : bool
+        Whether the results of an earlier run may be replaced.
+
+    Raises
+    ------
+    InputError
+        If the mission file or the folder cannot be used; nothing is written then.
+    """
+    folder = Path(out)
+    check_folder(folder, replace=replace)
+    mission = load_mission(file)
+    stems = {case: "--".join(case) for case in mission.cases}
+    check_names(folder, [_SUMMARY, *(name for stem in stems.values() for name in _names(stem, mission))])
+    with warnings.catch_warnings(record=True) as heard:
+        warnings.simplefilter("always", EnvfluxWarning)
+        steps = 1 + len(stems) * (4 if mission.output.plots else 2)
+        with tqdm(total=steps, disable=not sys.stderr.isatty(), leave=False, file=sys.stderr, unit="step") as progress:
+            try:
+                text = _write_all(mission, folder, stems, progress, heard, replace=replace)
+            except InputError as error:
+                if error.field == "--out":
+                    raise
+                # The complaint came from a computation, but what it is about stands in the file.
+                raise InputError(f"{file}: {error.field}", error.value, error.accepted, verb=error.verb) from None
+    print(text)
+    print(f"\nwritten to {folder}")
+    for caution in _heard(heard):
+        print(f"envflux: caution: {caution}", file=sys.stderr)
+
+
+def _write_all(
+    mission: Mission,
+    folder: Path,
+    stems: dict[tuple[str, str], str],
+    progress: Any,
+    heard: list[Any],
+    *,
+    replace: bool,
+) -> str:
+    progress.set_description("track")
+    track = mission.fly()
+    progress.update()
+    lines = _heading(mission, track)
+    with results_folder(folder, replace=replace) as fresh:
+        for (mode, environment), stem in stems.items():
+            progress.set_description(stem)
+            ds = mission.flux(mode, environment, track)
+            ds.attrs["title"] = f"{mission.mission.name}: {mode}, {environment}"
+            progress.update()
+            save(ds, fresh / f"{stem}.nc")
+            write_table(ds, fresh / f"{stem}.csv", title=str(ds.attrs["title"]), cautions=_heard(heard))
+            progress.update()
+            if mission.output.plots:
+                _draw(ds, fresh, stem, mission, progress)
+            lines += ["", _case_line(mission, mode, environment), *face_lines(ds)]
+        lines += ["", *(f"note: {caution}" for caution in (*CAUTIONS, *_heard(heard)))]
+        text = "\n".join(lines)
+        (fresh / _SUMMARY).write_text(text + "\n", encoding="utf-8")
+    return text
+
+
+def _names(stem: str, mission: Mission) -> list[str]:
+    endings = [".nc", ".csv", ".json"]
+    return [stem + ending for ending in endings + (["-history.png", "-means.png"] if mission.output.plots else [])]
+
+
+def _draw(ds: xr.Dataset, fresh: Path, stem: str, mission: Mission, progress: Any) -> None:
+    from envflux import plots
+
+    title = str(ds.attrs["title"])
+    with plots.off_screen():
+        panels: Any = plots.flux_history(ds, against=mission.output.against, title=title)
+        _save_png(panels.ravel()[0].figure, fresh / f"{stem}-history.png")
+        progress.update()
+        if _whole_revolution(ds):
+            bars: Any = plots.orbit_mean_bars(ds, title=f"{title}: orbit mean of incident flux")
+            _save_png(bars.figure, fresh / f"{stem}-means.png")
+        progress.update()
+
+
+def _save_png(figure: Any, path: Path) -> None:
+    # What savefig does, less its second pass through everything to find the layout; and little
+    # compression: time matters more here than a few kilobytes.
+    engine = figure.get_layout_engine()
+    if engine is not None:
+        engine.execute(figure)
+        figure.set_layout_engine("none")
+    figure.canvas.print_png(path, metadata={"Software": None}, pil_kwargs={"compress_level": 2})
+
+
+def _whole_revolution(ds: xr.Dataset) -> bool:
+    elapsed = ds["elapsed"].values
+    return bool(elapsed[-1] - elapsed[0] >= float(ds["orbital_period"]) * (1 - 1e-9))
+
+
+def _heading(mission: Mission, track: xr.Dataset) -> list[str]:
+    lines = [mission.mission.name]
+    if mission.mission.description:
+        lines.append(mission.mission.description)
+    time = track["time"].values
+    when = f"from {str(time[0])[:19]}Z" if time.dtype.kind == "M" else "from orbit noon, undated"
+    revolutions = float(track["elapsed"][-1] - track["elapsed"][0]) / float(track["orbital_period"])
+    orbit = (
+        f"{mission.orbit.kind} orbit, {revolutions:.4g} revolution{'' if abs(revolutions - 1) < 1e-6 else 's'} {when}"
+    )
+    return [*lines, "", orbit, *orbit_lines(track)]
+
+
+def _case_line(mission: Mission, mode: str, environment: str) -> str:
+    how, around = mission.modes[mode], mission.environments[environment]
+    bound = f"{how.bound} bound"
+    if how.bound_absorptance or how.bound_emittance:
+        bound = f"a {how.bound_absorptance or how.bound}, e {how.bound_emittance or how.bound}"
+    return (
+        f"[{mode} / {environment}]  {how.attitude.kind} attitude; {how.age} surfaces, {bound}, "
+        f"cells {how.cells}; {around.solar_constant_w_m2:g} W m-2 at 1 au, albedo {around.albedo:g}, "
+        f"planetary IR {around.planetary_ir_w_m2:g} W m-2"
+    )
+
+
+def _heard(heard: list[Any]) -> tuple[str, ...]:
+    texts = [" ".join(str(warning.message).split()) for warning in heard]
+    return tuple(dict.fromkeys(texts))
