@@ -22,7 +22,7 @@ def tai(*dates: str) -> np.ndarray:
     return almanac.tai_from_utc(np.array(dates, "datetime64[ns]"))
 
 
-def spread_of_dates(count: int = 120) -> np.ndarray:
+def spread_of_dates(count: int = 60) -> np.ndarray:
     """Moments over 2000-2050, with no regular step."""
     first, last = tai("2000-01-01", "2050-12-31")
     return np.sort(np.random.default_rng(7).integers(first, last, count))
