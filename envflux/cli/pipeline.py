@@ -74,7 +74,7 @@ def _write_all(
         for (mode, environment), stem in stems.items():
             progress.set_description(stem)
             ds = mission.flux(mode, environment, track)
-            ds.attrs["title"] = f"{mission.mission.name}: {mode}, {environment}"
+            ds.attrs["title"] = f"{mission.mission.name}: {mode} mode, {environment} environment"
             progress.update()
             save(ds, fresh / f"{stem}.nc")
             write_table(ds, fresh / f"{stem}.csv", title=str(ds.attrs["title"]), cautions=_heard(heard))
@@ -96,13 +96,12 @@ def _names(stem: str, mission: Mission) -> list[str]:
 def _draw(ds: xr.Dataset, fresh: Path, stem: str, mission: Mission, progress: Any) -> None:
     from envflux import plots
 
-    title = str(ds.attrs["title"])
     with plots.off_screen():
-        panels: Any = plots.flux_history(ds, against=mission.output.against, title=title)
+        panels: Any = plots.flux_history(ds, against=mission.output.against)
         _save_png(panels.ravel()[0].figure, fresh / f"{stem}-history.png")
         progress.update()
         if _whole_revolution(ds):
-            bars: Any = plots.orbit_mean_bars(ds, title=f"{title}: orbit mean of incident flux")
+            bars: Any = plots.orbit_mean_bars(ds)
             _save_png(bars.figure, fresh / f"{stem}-means.png")
         progress.update()
 

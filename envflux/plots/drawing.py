@@ -128,9 +128,9 @@ def x_label(ds: xr.Dataset, against: XAxis) -> str:
     return f"{unit} since orbit noon"
 
 
-def facts_line(ds: xr.Dataset, left_out: str = "") -> str:
+def facts_line(ds: xr.Dataset, left_out: str = "", *, with_title: bool = True) -> str:
     """Answer what a reviewer asks first: how high, how the Sun stands, how long the night is."""
-    words = []
+    words = [str(ds.attrs["title"])] if with_title and "title" in ds.attrs else []
     if "altitude" in ds:
         low, high = float(ds["altitude"].min()), float(ds["altitude"].max())
         middle = (low + high) / 2
@@ -174,7 +174,7 @@ def pretty_units(array: xr.DataArray) -> str:
 
 def number(value: float, reach: float) -> str:
     """As many decimals as the figure's scale deserves."""
-    return f"{value:.0f}" if reach >= 100 else f"{value:.1f}"
+    return f"{value:.0f}" if reach >= 100 and value >= 9.95 else f"{value:.1f}"
 
 
 def minus(text: str) -> str:
@@ -258,7 +258,7 @@ def _fitted(facts: str, width_in: float) -> list[str]:
     """Split facts over as many lines as the width asks for, none of them broken."""
     lines: list[str] = []
     for fact in facts.split(_BETWEEN):
-        if lines and len(lines[-1]) + len(_BETWEEN) + len(fact) <= 9.6 * width_in:
+        if lines and len(lines[-1]) + len(_BETWEEN) + len(fact) <= 11 * width_in:
             lines[-1] += _BETWEEN + fact
         else:
             lines.append(fact)

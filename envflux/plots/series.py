@@ -113,7 +113,8 @@ def flux_history(
     for panel in bottom:
         panel.set_xlabel(x_label(ds, against), fontsize=TEXT)
     if ax is None:
-        place_panels(panels, title or "Flux on each face", facts_line(ds, left_out_note(ds, shown)))
+        headline = title or str(ds.attrs.get("title", "Flux on each face"))
+        place_panels(panels, headline, facts_line(ds, left_out_note(ds, shown), with_title=False))
     return panels
 
 
@@ -240,11 +241,18 @@ def _pushed_apart(wanted: list[float], heights: list[float]) -> list[float]:
 
 
 def _label_eclipse(ax: Axes, shadows: list[tuple[str, float, float]], x: Array) -> None:
-    wide = [(start, end) for _, start, end in joined(shadows) if end - start > 0.09 * (x[-1] - x[0])]
-    if wide:
-        middle = (wide[0][0] + wide[0][1]) / 2
-        place: dict[str, Any] = {"transform": ax.get_xaxis_transform(), "ha": "center", "va": "top"}
-        ax.text(middle, 0.985, "eclipse", fontsize=TEXT, color=INK, **place)
+    spans = [(start, end) for _, start, end in joined(shadows)]
+    if not spans:
+        return
+    place: dict[str, Any] = {"transform": ax.get_xaxis_transform(), "va": "top", "fontsize": TEXT, "color": INK}
+    word = 0.14 * (x[-1] - x[0])  # room for the word
+    start, end = max(spans, key=lambda span: span[1] - span[0])
+    if end - start > word:
+        ax.text((start + end) / 2, 0.985, "eclipse", ha="center", **place)
+    elif end + word < x[-1]:
+        ax.text(end + 0.05 * word, 0.985, "eclipse", ha="left", **place)
+    else:
+        ax.text(start - 0.05 * word, 0.985, "eclipse", ha="right", **place)
 
 
 def _angle_ticks(ax: Axes, x: Array) -> None:
