@@ -87,8 +87,9 @@ def factors(
     -----
     Direct: two-disc shadow of the track times the clipped cosine. Planetary infrared: closed form of
     the view factor from a plate to a sphere. Albedo: ring quadrature, `envflux.kernels.planet`.
-    Reflected light is never scaled by the craft's own shadow: the planet below is still lit just
-    after the craft has entered eclipse.
+    Reflected light is never scaled by the craft's own shadow. On a sphere no lit ground is in view
+    from within the shadow, so it has faded to nothing there; it outlasts the Sun where the shadow's
+    radius is above the radiating one.
     """
     surfaces = craft.surfaces()
     normals = np.array([surface.normal for surface in surfaces])
@@ -340,6 +341,11 @@ def _checked(orientation: Orientation, times: int, law: AttitudeLaw) -> Orientat
                 worst = np.unravel_index(np.argmax(np.abs(product - (i == j))), product.shape)
                 accepted = "a rotation from body to frame: finite, with columns of length 1 at right angles"
                 raise InputError(f"{name}.rotations", rotations[worst].tolist(), accepted)
+    handed = np.cross(rotations[..., 0], rotations[..., 1])
+    if np.any(np.einsum("tpk,tpk->tp", handed, rotations[..., 2]) < 0.0):
+        raise InputError(
+            f"{name}.rotations", "left-handed", "right-handed: the third column is the first cross the second"
+        )
     return orientation
 
 

@@ -254,3 +254,61 @@ def two_axes(first_frame, second_frame, first_body, second_body):
 def spun(start, axis_body, angle_rad):
     """Turn bodies `start` (n, 3, 3) about a body axis by angles (n,) or (phases,) -> (n[, phases], 3, 3)."""
     return start @ Rotation.from_rotvec(np.outer(np.atleast_1d(angle_rad), unit(axis_body))).as_matrix()
+
+
+BODY_AXES = {
+    sign + name: factor * np.eye(3)[i] for i, name in enumerate("XYZ") for sign, factor in (("+", 1.0), ("-", -1.0))
+}
+
+
+def body_axes(law, track, angles_rad=None):
+    """Body to frame for a law's plain parameters along a track's states, (time, 3, 3).
+
+    `angles_rad` (phases,) instead of the spin angle in time: (time, phase, 3, 3) for a spin averaged over phase.
+    """
+    position, velocity = track.position.values, track.velocity.values
+    if law.kind == "nadir":
+        return nadir_axes(position, velocity, law.roll_deg, law.pitch_deg, law.yaw_deg)
+    if law.kind == "inertial":
+        return inertial_axes(len(position), law.quaternion_wxyz)
+    to_sun = sun_and_discs(position, track.sun_direction.values, track.sun_distance.values)[0]
+    normal = unit(np.cross(position, velocity))
+    centre_sun = track.sun_direction.values
+    height = np.sum(centre_sun * normal, axis=1)[:, None]
+    noon = centre_sun - height * normal
+    toward_normal = normal
+    if np.linalg.norm(noon, axis=1).max() < 1e-9:
+        # Beta of 90 degrees on an undated orbit: its x axis is orbit noon; the law documents the limit.
+        noon = np.broadcast_to([1.0, 0.0, 0.0], normal.shape)
+        toward_normal = -np.sign(height) * noon
+    if law.kind == "sun":
+        toward = {
+            "orbit normal": toward_normal,
+            "-orbit normal": -toward_normal,
+            "nadir": -position,
+            "zenith": position,
+            "velocity": velocity,
+            "-velocity": -velocity,
+        }[law.toward]
+        return two_axes(to_sun, toward, _body_vector(law.axis), _body_vector(law.clock_axis))
+    axis = _body_vector(law.axis)
+    following = np.eye(3)[(int(np.argmax(np.abs(axis))) + 1) % 3]
+    if law.about == "sun":
+        start = two_axes(to_sun, toward_normal, axis, following)
+    elif law.about == "orbit normal":
+        start = two_axes(normal, noon, axis, following)
+    else:
+        start = inertial_axes(len(position), (1.0, 0.0, 0.0, 0.0))
+        if law.direction is not None:
+            goal = unit(law.direction)
+            across = np.cross(axis, goal)
+            angle = np.arctan2(np.linalg.norm(across), axis @ goal)
+            start = np.broadcast_to(Rotation.from_rotvec(unit(across) * angle).as_matrix(), start.shape)
+    if angles_rad is not None:
+        return spun(start[:, None], axis, angles_rad)
+    turned = np.radians(law.phase_deg) + 2.0 * np.pi * law.rate_rpm / 60.0 * track.elapsed.values
+    return spun(start, axis, turned)
+
+
+def _body_vector(axis):
+    return BODY_AXES[axis] if isinstance(axis, str) else unit(axis)
