@@ -331,16 +331,19 @@ def planet_factors(
                 infrared += weights[p] * plate_to_sphere(max(-1.0, min(1.0, nz)), H)
                 if not lit:
                     continue
-                if nz * cos_disc < horizontal * sin_disc:
+                # One variable for both calls below: a literal True or False would compile the ring loop twice.
+                in_full = nz * cos_disc >= horizontal * sin_disc
+                if not in_full:
                     for kind in range(kinds):
-                        reflection[kind] += weights[p] * reflected(nx, ny, nz, False, kind == 1, rings)
+                        reflection[kind] += weights[p] * reflected(nx, ny, nz, in_full, kind == 1, rings)
                     continue
                 # The whole disc is in view: the factor is linear in the normal, and one vector
                 # integral (no part of it along y) serves every such face of this instant.
                 if not whole_known:
                     for kind in range(kinds):
                         for axis in range(2):
-                            whole[kind, axis] = reflected(1.0 - axis, 0.0, axis, True, kind == 1, rings)
+                            up = float(axis)
+                            whole[kind, axis] = reflected(1.0 - up, 0.0, up, in_full, kind == 1, rings)
                     whole_known = True
                 for kind in range(kinds):
                     reflection[kind] += weights[p] * (nx * whole[kind, 0] + nz * whole[kind, 1])
