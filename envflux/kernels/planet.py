@@ -356,15 +356,24 @@ def planet_factors(
 @compiled
 def _toward_sun(s0: float, s1: float, s2: float, z0: float, z1: float, z2: float, x: Array) -> None:
     """The unit horizontal direction to the Sun's side; any horizontal one where the Sun is overhead."""
-    height = s0 * z0 + s1 * z1 + s2 * z2
-    x[0], x[1], x[2] = s0 - height * z0, s1 - height * z1, s2 - height * z2
+    x[0], x[1], x[2] = s0, s1, s2
+    # Twice: with the Sun all but overhead, what the first pass leaves is mostly rounding, and not level.
+    if _make_level(z0, z1, z2, x) < 1e-12 or _make_level(z0, z1, z2, x) < 0.5:
+        steep = abs(z0) < 0.6
+        x[0], x[1], x[2] = 1.0 if steep else 0.0, 0.0 if steep else 1.0, 0.0
+        _make_level(z0, z1, z2, x)
+
+
+@compiled
+def _make_level(z0: float, z1: float, z2: float, x: Array) -> float:
+    """Take from `x` its part along the unit vector z, and scale the rest to length 1; the length it had."""
+    height = x[0] * z0 + x[1] * z1 + x[2] * z2
+    x[0] -= height * z0
+    x[1] -= height * z1
+    x[2] -= height * z2
     length = math.sqrt(x[0] ** 2 + x[1] ** 2 + x[2] ** 2)
-    if length < 1e-12:
-        if abs(z0) < 0.6:
-            x[0], x[1], x[2] = 1.0 - z0 * z0, -z0 * z1, -z0 * z2
-        else:
-            x[0], x[1], x[2] = -z1 * z0, 1.0 - z1 * z1, -z1 * z2
-        length = math.sqrt(x[0] ** 2 + x[1] ** 2 + x[2] ** 2)
-    x[0] /= length
-    x[1] /= length
-    x[2] /= length
+    if length > 0.0:
+        x[0] /= length
+        x[1] /= length
+        x[2] /= length
+    return length
