@@ -64,7 +64,7 @@ def _visible(separation: float, sun: float, body: float) -> float:
     # Half the common chord by Heron's formula in factors, and both half-angles by atan2: no
     # difference of nearly equal squares, and no arc cosine near 1, however unequal the discs.
     half_chord = np.sqrt((sun + body + separation) * (sun + body - separation))
-    half_chord *= np.sqrt(separation + sun - body) * np.sqrt(separation + body - sun) / (2.0 * separation)
+    half_chord *= np.sqrt(separation + (sun - body)) * np.sqrt(separation + (body - sun)) / (2.0 * separation)
     from_sun = ((separation - body) * (separation + body) + sun * sun) / (2.0 * separation)
     from_body = ((separation - sun) * (separation + sun) + body * body) / (2.0 * separation)
     covered = sun * sun * _segment(np.arctan2(half_chord, from_sun))

@@ -42,18 +42,42 @@ class Pace(NamedTuple):
 
     def samples_us(self, start_us: int, first: int, last: int, per_revolution: int) -> Microseconds:
         """Moments that divide the revolutions `first` to before `last` evenly, in time or in true anomaly."""
+        return self._divided(start_us, first, last, np.arange(per_revolution) / per_revolution)
+
+    def _divided(self, start_us: int, first: int, last: int, parts: Array) -> Microseconds:
         edges = self.boundary_us(start_us, range(first, last + 1))
-        parts = np.arange(per_revolution) / per_revolution
         if self.eccentricity <= EVEN_TIME_UP_TO:
             spans = np.diff(edges)[:, None]
             return (edges[:-1, None] + np.round(spans * parts).astype(np.int64)).reshape(-1)
         # The revolution is nodal, the anomaly is not: each revolution is divided between the anomalies
         # at its own two ends.
-        mean = self.mean_anomaly_rad + self.mean_rate_rad_s * ((edges - self.epoch_us) * 1e-6)
-        anomaly = true_from_mean(mean, self.eccentricity)
+        anomaly = self._anomaly_rad(edges)
         divided = anomaly[:-1, None] + np.diff(anomaly)[:, None] * parts
         since_s = (mean_from_true(divided, self.eccentricity) - self.mean_anomaly_rad) / self.mean_rate_rad_s
         return (self.epoch_us + np.round(since_s * 1e6).astype(np.int64)).reshape(-1)
+
+    def _anomaly_rad(self, times_us: Microseconds) -> Array:
+        mean = self.mean_anomaly_rad + self.mean_rate_rad_s * ((times_us - self.epoch_us) * 1e-6)
+        return true_from_mean(mean, self.eccentricity)
+
+    def samples_within_us(self, start_us: int, end_us: int, per_revolution: int) -> Microseconds:
+        """The same for a span that may end within a revolution; nothing is laid out beyond it.
+
+        Raises
+        ------
+        InputError
+            Where this makes too many samples: near perigee they are dense.
+        """
+        whole = int((end_us - start_us) / (self.period_s * 1e6))
+        low, high = self._anomaly_rad(self.boundary_us(start_us, range(whole, whole + 2)))
+        turned = float(self._anomaly_rad(np.array([end_us], np.int64))[0])
+        rest = math.ceil(min(max((turned - low) / (high - low), 0.0), 1.0) * per_revolution)
+        if whole * per_revolution + rest > MOST_SAMPLES:
+            raise InputError(
+                "step_s", self.period_s / per_revolution, f"such that a track holds {MOST_SAMPLES:,} samples"
+            )
+        partial = self._divided(start_us, whole, whole + 1, np.arange(rest) / per_revolution)
+        return np.concatenate([self.samples_us(start_us, 0, whole, per_revolution), partial])
 
 
 class Request(NamedTuple):
@@ -144,9 +168,17 @@ def regular_us(pace: Pace, start_us: int, request: Request) -> Microseconds:
         count = int(request.span_us / (request.step_s * 1e6)) + 1
         times = start_us + np.round(np.arange(count) * (request.step_s * 1e6)).astype(np.int64)
     else:
-        revolutions = math.ceil(request.span_us / (pace.period_s * 1e6))
-        times = pace.samples_us(start_us, 0, revolutions, max(round(pace.period_s / request.step_s), COARSEST_STEPS))
+        per_revolution = max(round(pace.period_s / request.step_s), COARSEST_STEPS)
+        times = pace.samples_within_us(start_us, start_us + request.span_us, per_revolution)
+        # A tiny step is tinier still at perigee: one sample in each slot of the merging distance.
+        slot = times // merging_us(request.step_s)
+        times = times[np.concatenate([[True], slot[1:] != slot[:-1]])]
     return times[times < start_us + request.span_us]
+
+
+def merging_us(step_s: float) -> int:
+    """Distance below which samples merge: 1 ms, or a quarter of a very small step. [us]."""
+    return min(MERGED_US, max(int(step_s * 1e6) // 4, 1))
 
 
 def merge(

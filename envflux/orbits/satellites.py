@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from datetime import UTC, datetime, timedelta
-from functools import lru_cache
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -54,8 +53,8 @@ class SatelliteStates:
             reason = SGP4_ERRORS.get(int(codes[i]), f"code {int(codes[i])}")
             raise InputError(
                 self.field,
-                Told(f"not usable {days[i]:+.2f} days from its epoch (SGP4: {reason})"),
-                "a set of elements that SGP4 can follow over the whole track",
+                Told(f"not usable {days[i]:+.2f} days from its epoch"),
+                f"part of elements that SGP4 can follow over the whole track; it says: {reason}",
             )
         frame = almanac.earth_frame(times_us)
         to_gcrs(frame.matrix, np.ascontiguousarray(frame.teme_rad), position, velocity)
@@ -148,7 +147,6 @@ class TleOrbit(_Satellite):
         return "line2"
 
 
-@lru_cache(maxsize=256)
 def _record_from_lines(line1: str, line2: str) -> Satrec:
     try:
         return Satrec.twoline2rv(line1, line2, WGS72)
@@ -272,7 +270,6 @@ class OmmOrbit(_Satellite):
         return "mean_motion_rev_day"
 
 
-@lru_cache(maxsize=256)
 def _record_from_elements(epoch_days: float, bstar: float, ndot: float, nddot: float, *elements: float) -> Satrec:
     record = Satrec()
     per_minute2 = 2.0 * math.pi / 1440.0**2

@@ -117,8 +117,7 @@ class Trackable(Definition):
             almanac.check_tai(last_us, last_us, "duration_s" if duration_s is not None else "revolutions")
         if shadow.oblate and not states.dated:
             raise InputError("shadow.oblate", True, "false: an undated orbit does not know where the pole is")
-        scan = _scan_us(pace, first_us, last_us)
-        contacts = find_contacts(states, scan, shadow, first_us, last_us)
+        contacts = _contacts(states, _scan_us(pace, first_us, last_us), shadow, first_us, last_us)
         times, flags = _samples(pace, request, contacts, first_us, last_us, shadow)
         kept, clock = _clock(times, first_us, dated=states.dated)
         times, flags = times[kept], flags[kept]
@@ -151,6 +150,15 @@ def dated_start(start: object, epoch: datetime) -> datetime:
     return instant
 
 
+def _contacts(states: States, scan_us: Microseconds, shadow: Shadow, first_us: int, last_us: int) -> Contacts:
+    try:
+        return find_contacts(states, scan_us, shadow, first_us, last_us)
+    except InputError:
+        # The scan looks a little past both ends; elements may be unusable there and good within.
+        inner = scan_us[(scan_us > first_us) & (scan_us < last_us)]
+        return find_contacts(states, np.concatenate([[first_us], inner, [last_us]]), shadow, first_us, last_us)
+
+
 def _scan_us(pace: Pace, first_us: int, last_us: int) -> Microseconds:
     """Nodes of the search for contacts: whole revolutions around the track, one node past each end."""
     revolutions = int(np.ceil((last_us - first_us) / (pace.period_s * 1e6)))
@@ -175,8 +183,7 @@ def _samples(
     else:
         inner = interior_us(contacts, first_us, last_us, pace.period_s)
         groups.append((inner, grids.INTERIOR))
-    gap_us = min(grids.MERGED_US, max(int(request.step_s * 1e6) // 4, 1))
-    return grids.merge(groups, contacts.times_us, contacts.kinds, gap_us)
+    return grids.merge(groups, contacts.times_us, contacts.kinds, grids.merging_us(request.step_s))
 
 
 def _clock(times_us: Microseconds, first_us: int, *, dated: bool) -> tuple[NDArray[np.bool_], Any]:
