@@ -123,7 +123,7 @@ def check_date(instant: datetime, field: str) -> None:
         Naming `field` and the range of dates.
     """
     if not FIRST_DATE <= instant <= LAST_DATE:
-        raise InputError(field, instant.isoformat(), _accepted_dates())
+        raise InputError(field, instant.isoformat(), accepted_dates())
 
 
 def check_year(utc: NDArray[np.datetime64], field: str) -> None:
@@ -137,25 +137,16 @@ def check_year(utc: NDArray[np.datetime64], field: str) -> None:
     years = utc.astype("datetime64[Y]").astype(np.int64) + 1970
     outside = (years < FIRST_DATE.year) | (years > LAST_DATE.year)
     if outside.any():
-        raise InputError(field, str(utc[int(np.argmax(outside))]), _accepted_dates())
+        raise InputError(field, str(utc[int(np.argmax(outside))]), accepted_dates())
 
 
-def check_tai(first_us: int, last_us: int, field: str) -> None:
-    """Refuse a span of TAI microseconds that leaves the ephemeris.
-
-    Raises
-    ------
-    InputError
-        Naming `field` and the range of dates.
-    """
-    for moment in (first_us, last_us):
-        if not tai_from_instant(FIRST_DATE) <= moment <= tai_from_instant(LAST_DATE):
-            seconds = (moment - tai_from_instant(FIRST_DATE)) / _SECOND_US
-            year = 1900.0 + seconds / (365.25 * 86_400.0)
-            raise InputError(field, f"a time in the year {year:.0f}", _accepted_dates())
+def within_ephemeris(first_us: int, last_us: int) -> bool:
+    """Whether a span of TAI microseconds stays inside the ephemeris."""
+    return tai_from_instant(FIRST_DATE) <= first_us and last_us <= tai_from_instant(LAST_DATE)
 
 
-def _accepted_dates() -> str:
+def accepted_dates() -> str:
+    """Say which dates the ephemeris covers, to follow "must be"."""
     return f"between {FIRST_DATE:%Y-%m-%d} and {LAST_DATE:%Y-%m-%d}, the span of the ephemeris"
 
 

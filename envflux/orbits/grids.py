@@ -124,14 +124,14 @@ def check_request(
     limits = f"above 0 and at most {_down(period / COARSEST_STEPS)} s, 1/{COARSEST_STEPS} of a revolution"
     if step > period / COARSEST_STEPS * (1.0 + 1e-12):
         raise InputError("step_s", step_s, limits)
+    if step < 1e-3:
+        raise InputError("step_s", step_s, "at least 0.001 s")
     if span_s / step > MOST_SAMPLES:
         raise InputError(
             "step_s" if given else "duration_s" if revolutions is None else "revolutions",
             step_s if given else duration_s if revolutions is None else revolutions,
             f"such that the track holds at most {MOST_SAMPLES:,} samples, not {span_s / step:,.0f}",
         )
-    if step < 1e-3:
-        raise InputError("step_s", step_s, "at least 0.001 s")
     if step > period / WARNED_STEPS * (1.0 + 1e-12):
         warnings.warn(
             f"step_s is {step:g}; above {_down(period / WARNED_STEPS)} s (1/{WARNED_STEPS} of a revolution) "

@@ -26,13 +26,13 @@ from envflux.orbits.tracks import Trackable, dated_start
 from envflux.orbits.wording import MISSING
 from envflux.planets import EARTH
 
+# Limits of optional fields stand outside the "or None": that is where messages look for the whole range.
 LOWEST_KM = 100.0  # below, no orbit lasts a revolution
 HIGHEST_KM = 500_000.0  # above, the Earth no longer rules the motion
 
 Altitude = Annotated[float, Field(ge=LOWEST_KM, le=HIGHEST_KM)]
 Inclination = Annotated[float, Field(ge=0.0, le=180.0)]
 Angle = Annotated[float, Field(ge=-360.0, le=360.0)]
-Hours = Annotated[float, Field(ge=0.0, lt=24.0)]
 
 
 class _ElementOrbit(Trackable):
@@ -93,15 +93,15 @@ class KeplerOrbit(_ElementOrbit):
     """
 
     kind: Literal["kepler"] = "kepler"
-    semi_major_axis_km: Annotated[float, Field(gt=0.0)] | None = None
-    perigee_altitude_km: Altitude | None = None
-    apogee_altitude_km: Altitude | None = None
-    eccentricity: Annotated[float, Field(ge=0.0, lt=1.0)] | None = None
+    semi_major_axis_km: Annotated[float | None, Field(gt=0.0)] = None
+    perigee_altitude_km: Annotated[float | None, Field(ge=LOWEST_KM, le=HIGHEST_KM)] = None
+    apogee_altitude_km: Annotated[float | None, Field(ge=LOWEST_KM, le=HIGHEST_KM)] = None
+    eccentricity: Annotated[float | None, Field(ge=0.0, lt=1.0)] = None
     inclination_deg: Inclination
     raan_deg: Angle = 0.0
     arg_perigee_deg: Angle = 0.0
-    true_anomaly_deg: Angle | None = None
-    mean_anomaly_deg: Angle | None = None
+    true_anomaly_deg: Annotated[float | None, Field(ge=-360.0, le=360.0)] = None
+    mean_anomaly_deg: Annotated[float | None, Field(ge=-360.0, le=360.0)] = None
     epoch: Instant
     j2: bool = True
 
@@ -239,8 +239,8 @@ class SunSynchronousOrbit(_ElementOrbit):
 
     kind: Literal["sun-synchronous"] = "sun-synchronous"
     altitude_km: Altitude
-    ltan_hours: Hours | None = None
-    ltdn_hours: Hours | None = None
+    ltan_hours: Annotated[float | None, Field(ge=0.0, lt=24.0)] = None
+    ltdn_hours: Annotated[float | None, Field(ge=0.0, lt=24.0)] = None
     epoch: Instant
     sun: Literal["mean", "apparent"] = "mean"
     argument_of_latitude_deg: Angle = 0.0

@@ -114,7 +114,8 @@ def _clock(time: ArrayLike) -> tuple[Any, NDArray[np.int64], bool]:
         # Checked before the conversion to nanoseconds, which cannot hold far dates.
         almanac.check_year(values, "time")
         times_us = almanac.tai_from_utc(values)
-        almanac.check_tai(int(times_us.min()), int(times_us.max()), "time")
+        if not almanac.within_ephemeris(int(times_us.min()), int(times_us.max())):
+            raise InputError("time", Told("partly outside"), almanac.accepted_dates())
         clock = almanac.utc_from_tai(times_us)[0]
     else:
         times_us = (values.astype("timedelta64[ns]").astype(np.int64) + 500) // 1000

@@ -112,9 +112,9 @@ class Trackable(Definition):
         )
         states = self._states()
         last_us = first_us + request.span_us
-        if states.dated:
-            almanac.check_tai(first_us, first_us, "start" if start is not None else "epoch")
-            almanac.check_tai(last_us, last_us, "duration_s" if duration_s is not None else "revolutions")
+        if states.dated and not almanac.within_ephemeris(first_us, last_us):
+            field, value = ("duration_s", duration_s) if duration_s is not None else ("revolutions", revolutions or 1)
+            raise InputError(field, value, f"such that the track stays {almanac.accepted_dates()}")
         if shadow.oblate and not states.dated:
             raise InputError("shadow.oblate", True, "false: an undated orbit does not know where the pole is")
         contacts = _contacts(states, _scan_us(pace, first_us, last_us), shadow, first_us, last_us)
