@@ -26,6 +26,9 @@ _WITHOUT_MEAN = frozenset(
     ("position", "velocity", "sun", "sun_direction", "longitude", "local_solar_time", "sun_azimuth", "sun_incidence")
 )
 
+# Cosines below this are rounding of zero.
+_ON_PLANE = 1e-12
+
 # The integrand drops to zero at the corner (a cosine), or jumps there (a yes or no).
 _WITH_CORNER = {"g_sun": "bends", "solar_flux": "bends", "absorbed_flux": "bends", "sun_exposure": "jumps"}
 
@@ -259,8 +262,13 @@ def _corners(dataset: xr.Dataset, name: str, values: Array, block: _Revolutions)
     if kind is None or "sun_incidence" not in dataset:
         return 0.0
     cosine = np.cos(np.radians(dataset.sun_incidence.transpose("time", "face").values[block.samples]))
+    turned = cosine > 0.0
+    if "sun_exposure" in dataset:
+        # A sample on the plane itself (orbit noon, often) is on the side that its exposure was counted for.
+        exposed = dataset.sun_exposure.transpose("time", "face").values[block.samples] > 0.0
+        turned = np.where(np.abs(cosine) < _ON_PLANE, exposed, turned)
     before, after = cosine[:-1], cosine[1:]
-    crossing = before * after < 0.0
+    crossing = turned[1:] != turned[:-1]
     if not crossing.any():
         return 0.0
     if name == "absorbed_flux":
@@ -269,13 +277,12 @@ def _corners(dataset: xr.Dataset, name: str, values: Array, block: _Revolutions)
         part = sunlight * dataset.absorptance.values
     else:
         part = values[block.samples]
-    rises = after > 0.0
+    rises = turned[1:]
     lit = np.where(rises, part[1:], part[:-1])
     dark = np.where(rises, part[:-1], part[1:])
     # An average over phases has no corner: it is not zero on the side turned away.
     crossing &= dark == 0.0
-    with np.errstate(invalid="ignore", divide="ignore"):
-        share = np.where(rises, after, before) / (np.abs(before) + np.abs(after))
+    share = np.where(rises, after, before) / np.maximum(np.abs(before) + np.abs(after), 1e-300)
     counted = 0.5 * block.step_s[:, None] * lit
     true = counted * share * (2.0 if kind == "jumps" else 1.0)
     return np.where(crossing, true - counted, 0.0)
