@@ -33,7 +33,9 @@ def test_committed_without_output(path: Path) -> None:
 
 
 @pytest.mark.parametrize("path", NOTEBOOKS, ids=lambda path: path.stem)
-def test_runs_from_a_clean_kernel(path: Path, tmp_path: Path) -> None:
+def test_runs_from_a_clean_kernel(path: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    # The kernel inherits it, and would then draw without showing.
+    monkeypatch.delenv("MPLBACKEND", raising=False)
     notebook = nbformat.read(path, as_version=4)
     client = NotebookClient(
         notebook, timeout=SLOWEST_CELL_S, kernel_name="python3", resources={"metadata": {"path": str(tmp_path)}}
