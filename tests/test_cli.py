@@ -287,6 +287,28 @@ def test_help_teaches_without_loading_the_rest() -> None:
         assert word in done.stdout
 
 
+@pytest.mark.skipif(os.name != "posix", reason="pseudo-terminals are a Unix thing")
+def test_progress_is_shown_on_a_terminal_only(tmp_path: Path) -> None:
+    import pty
+    import select
+
+    (tmp_path / "m.toml").write_text(MISSION, encoding="utf-8")
+    command = [sys.executable, "-m", "envflux.cli", "run", "m.toml", "--out", "out"]
+    ours, theirs = pty.openpty()
+    with subprocess.Popen(command, cwd=tmp_path, stdout=subprocess.PIPE, stderr=theirs, text=True) as run:
+        out, _ = run.communicate(timeout=300)
+    ready, _, _ = select.select([ours], [], [], 1.0)
+    assert ready, "nothing was shown"
+    shown = os.read(ours, 100_000).decode()
+    os.close(ours)
+    os.close(theirs)
+    assert run.returncode == 0
+    assert "track" in shown
+    assert "nadir--mean" in shown
+    assert "3/3" in shown or "2/3" in shown
+    assert "|" not in out
+
+
 def test_version(capsys: pytest.CaptureFixture[str]) -> None:
     from importlib.metadata import version
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 import sys
 import warnings
 from pathlib import Path
@@ -43,7 +44,7 @@ def run_mission(file: str, out: str, *, replace: bool = False) -> None:
     with warnings.catch_warnings(record=True) as heard:
         warnings.simplefilter("always", EnvfluxWarning)
         steps = 1 + len(stems) * (4 if mission.output.plots else 2)
-        with tqdm(total=steps, disable=not sys.stderr.isatty(), leave=False, file=sys.stderr, unit="step") as progress:
+        with _progress(steps) as progress:
             try:
                 text = _write_all(mission, folder, stems, progress, heard, replace=replace)
             except InputError as error:
@@ -55,6 +56,21 @@ def run_mission(file: str, out: str, *, replace: bool = False) -> None:
     print(f"\nwritten to {folder}")
     for caution in _heard(heard):
         print(f"envflux: caution: {caution}", file=sys.stderr)
+
+
+def _progress(steps: int) -> Any:
+    """Show what is being done, on a terminal; stay silent in a pipe or a log."""
+    # Some terminals say they are 0 by 0, which would hide the bar.
+    columns, rows = shutil.get_terminal_size()
+    return tqdm(
+        total=steps,
+        disable=not sys.stderr.isatty(),
+        leave=False,
+        file=sys.stderr,
+        ncols=min(columns, 90),
+        nrows=rows,
+        bar_format="{desc:<30.30} |{bar}| {n_fmt}/{total_fmt}",
+    )
 
 
 def _write_all(
