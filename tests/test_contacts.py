@@ -424,8 +424,10 @@ def test_contacts_come_in_order_and_sunlight_agrees(altitude_km, beta_deg):
     kinds = track.contact.values[track.contact.values > 0].tolist()
     assert kinds in ([], [1, 4], [1, 2, 3, 4])
     assert (np.diff(track.elapsed) > 0).all()
-    np.testing.assert_allclose(track.sunlit.values, np.interp(-track.elapsed.values + track.elapsed.values[-1],
-                               track.elapsed.values, track.sunlit.values), atol=0.05)  # fmt: skip
+    # The second half mirrors the first: what is seen at t after noon is seen at t before it. Contacts are
+    # 5e-5 s off at most, of a penumbra of 7 s or more.
+    mirrored = np.interp(track.elapsed.values[-1] - track.elapsed.values, track.elapsed.values, track.sunlit.values)
+    np.testing.assert_allclose(track.sunlit.values, mirrored, rtol=0.0, atol=1e-3)
 
 
 def test_tle_contacts_are_flagged():

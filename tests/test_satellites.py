@@ -48,9 +48,8 @@ SETS = verification_sets()
 def teme_to_gcrs(tai_us, vectors):
     """TEME to PEF by GMST of 1982, back to the true equator of date by GAST, to GCRS: all pyerfa."""
     jd, tt = 2440587.5, tai_us / 86_400e6 + 32.184 / 86_400.0
-    leap_s = (tai_us - almanac.tai_from_utc(np.array([0], "datetime64[ns]"))) / 1e6  # only to look up a year
-    year = 1970 + leap_s / (365.25 * 86_400.0)
-    ut1 = tt - (63.0 + 0.0 * year) / 86_400.0  # UT1 cancels between the two sidereal angles
+    # Both sidereal angles contain the same UT1, so a rough one does: TT - UT1 was 50 to 65 s from 1980 to 2006.
+    ut1 = tt - 60.0 / 86_400.0
     turn = erfa.gmst82(jd, ut1) - erfa.gst06a(jd, ut1, jd, tt)
     out = []
     for angle, matrix, vector in zip(turn, erfa.pnm06a(jd, tt), vectors, strict=True):
