@@ -12,12 +12,12 @@ from dataclasses import dataclass
 
 import numpy as np
 import xarray as xr
-from envflux.attitudes import Orientation
-from envflux.fluxes import flux
 
+from envflux.attitudes import Orientation
 from envflux.coatings import Coating
 from envflux.craft import box_craft
 from envflux.environments import Environment
+from envflux.fluxes import flux
 from envflux.orbits import CircularOrbit
 from envflux.tables import summary_table
 
