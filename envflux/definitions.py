@@ -42,8 +42,12 @@ class Definition(BaseModel):
             if name in data:
                 raise TypeError(f"{type(self).__name__} got {name} twice, by position and by name")
             data[name] = value
+        # numpy's own numbers, as loops over arrays give them, are as good as Python's; its dates stay.
+        plain = {
+            name: value.item() if isinstance(value, np.number | np.bool_) else value for name, value in data.items()
+        }
         try:
-            super().__init__(**data)
+            super().__init__(**plain)
         except ValidationError as error:
             raise explain(error, type(self)) from None
 

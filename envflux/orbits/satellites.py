@@ -40,12 +40,15 @@ class SatelliteStates:
         the way through the Earth-fixed frame of Vallado et al., *Revisiting Spacetrack Report #3*,
         AIAA 2006-6753, appendix C; precession-nutation takes it on to GCRS.
 
+        Time since the epoch is counted in UTC days of 86 400 s, as element sets are made and used:
+        a leap second in between does not count.
+
         Raises
         ------
         InputError
             If SGP4 cannot follow the elements that far.
         """
-        days = (times_us - self.epoch_us) * (1e-6 / 86_400.0)
+        days = (_label_us(times_us) - _label_us(np.array([self.epoch_us]))) * (1e-6 / 86_400.0)
         whole = np.full(days.size, self.satellite.jdsatepoch)
         codes, position, velocity = self.satellite.sgp4_array(whole, self.satellite.jdsatepochF + days)
         if codes.any():
@@ -268,6 +271,10 @@ class OmmOrbit(_Satellite):
 
     def _source_field(self) -> str:
         return "mean_motion_rev_day"
+
+
+def _label_us(tai_us: Microseconds) -> Microseconds:
+    return almanac.utc_from_tai(tai_us)[0].astype(np.int64) // 1000
 
 
 def _record_from_elements(epoch_days: float, bstar: float, ndot: float, nddot: float, *elements: float) -> Satrec:
