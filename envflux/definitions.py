@@ -17,7 +17,7 @@ import numpy as np
 from pydantic import BaseModel, BeforeValidator, ConfigDict, ValidationError
 from pydantic_core import ErrorDetails
 
-from envflux.errors import InputError, did_you_mean
+from envflux.errors import MISSING, InputError, did_you_mean
 
 
 class Definition(BaseModel):
@@ -147,13 +147,6 @@ Vector3 = Annotated[tuple[float, float, float], Listed]
 """A field that holds three components."""
 
 
-class _Missing:
-    """Stands for a value that was not given, in a message."""
-
-    def __str__(self) -> str:
-        return "missing"
-
-
 def explain(error: ValidationError, model: type[BaseModel]) -> InputError:
     """The most useful of pydantic's complaints, as one sentence about the user's own field."""
     details = sorted(error.errors(include_url=False), key=_rank)
@@ -184,11 +177,11 @@ def _sentence(detail: ErrorDetails, model: type[BaseModel]) -> InputError:
         hint = did_you_mean(path[-1], known)
         return InputError(field, value, f"one of: {', '.join(known)}{hint}", verb="the name is unknown; it must be")
     if kind == "missing":
-        return InputError(field, _Missing(), "given")
+        return InputError(field, MISSING, "given")
     if kind in ("union_tag_invalid", "union_tag_not_found"):
         tag = context.get("discriminator", "'kind'").strip("'")
         known = context.get("expected_tags", "")
-        given = value.get(tag, _Missing()) if isinstance(value, dict) else value
+        given = value.get(tag, MISSING) if isinstance(value, dict) else value
         names = [tag_name.strip(" '") for tag_name in known.split(",")] if known else _tags(path, model)
         return InputError(f"{field}.{tag}", given, f"one of: {', '.join(names)}{did_you_mean(str(given), names)}")
     if kind == "literal_error":

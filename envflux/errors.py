@@ -9,6 +9,18 @@ from collections.abc import Iterable
 from difflib import get_close_matches
 
 
+class Told(str):
+    """What came, in words rather than as a value: a message shows it without quotes."""
+
+    __slots__ = ()
+
+    def __repr__(self) -> str:
+        return str(self)
+
+
+MISSING = Told("missing")
+
+
 class InputError(ValueError):
     """A value the user gave cannot be used.
 

@@ -21,7 +21,7 @@ from envflux.coatings import Age, Bound, Cells, Coating, catalogue_coating
 from envflux.craft import Craft, Face, box_craft
 from envflux.definitions import Definition, Instant, Vector3
 from envflux.environments import Environment, environment_preset
-from envflux.errors import InputError, did_you_mean
+from envflux.errors import MISSING, InputError, Told, did_you_mean
 from envflux.fluxes import SurfaceState, flux
 from envflux.orbits import OmmOrbit, Orbit
 
@@ -32,16 +32,6 @@ _T = TypeVar("_T")
 _FILE_SAFE = re.compile(r"[A-Za-z0-9]+([-_][A-Za-z0-9]+)*")
 _LONGEST_NAME = 60
 _CATALOGUE_ID = re.compile(r"[Cc]\d+")
-
-
-class _Said:
-    """Words that stand in the place of a value in a message, without quotation marks."""
-
-    def __init__(self, words: str) -> None:
-        self.words = words
-
-    def __str__(self) -> str:
-        return self.words
 
 
 class About(Definition):
@@ -165,7 +155,7 @@ class Mission(Definition):
     @classmethod
     def _named_for_files(cls, value: dict[str, Any]) -> dict[str, Any]:
         if not value:
-            raise InputError("names", _Said("empty"), "given: at least one table")
+            raise InputError("names", Told("empty"), "given: at least one table")
         seen: dict[str, str] = {}
         for name in value:
             if not _FILE_SAFE.fullmatch(name) or len(name) > _LONGEST_NAME:
@@ -262,15 +252,15 @@ def _parsed(path: Path) -> dict[str, Any]:
         # Editors on some systems put a byte-order mark first, which TOML does not allow.
         return tomllib.loads(path.read_bytes().decode("utf-8-sig"))
     except (FileNotFoundError, NotADirectoryError):
-        raise InputError(str(path), _Said("missing"), "a mission file that exists") from None
+        raise InputError(str(path), MISSING, "a mission file that exists") from None
     except IsADirectoryError:
-        raise InputError(str(path), _Said("a folder"), "a mission file") from None
+        raise InputError(str(path), Told("a folder"), "a mission file") from None
     except UnicodeDecodeError as error:
-        raise InputError(str(path), _Said(f"not UTF-8 at byte {error.start}"), "a text file in UTF-8") from None
+        raise InputError(str(path), Told(f"not UTF-8 at byte {error.start}"), "a text file in UTF-8") from None
     except tomllib.TOMLDecodeError as error:
         what, _, where = str(error).rpartition(" (at ")
         where = where.rstrip(")") or "the end of the file"
-        raise InputError(str(path), _Said(f"broken at {where}"), f"valid TOML ({what or error})") from None
+        raise InputError(str(path), Told(f"broken at {where}"), f"valid TOML ({what or error})") from None
 
 
 def _mission(table: dict[str, Any], folder: Path) -> Mission:

@@ -15,6 +15,7 @@ from typing import Any, TypeVar, cast
 
 import numba
 
+_config: Any = numba.config  # its settings are made at run time: no type checker sees them
 Function = TypeVar("Function", bound=Callable[..., Any])
 
 # Reassociation lets sums over rings run in vector registers. Inputs are checked for NaN and
@@ -45,8 +46,8 @@ def _writable(folder: Path) -> bool:
 def _keep_cache_somewhere() -> None:
     """Numba refuses to import a cached kernel where it can write neither here nor in the home folder."""
     home_cache = Path(os.environ.get("XDG_CACHE_HOME", "~/.cache")).expanduser()
-    if not numba.config.CACHE_DIR and not _writable(Path(__file__).parent / "__pycache__") and not _writable(home_cache):
-        numba.config.CACHE_DIR = str(Path(tempfile.gettempdir()) / f"envflux-numba-{os.getuid()}")
+    if not _config.CACHE_DIR and not _writable(Path(__file__).parent / "__pycache__") and not _writable(home_cache):
+        _config.CACHE_DIR = str(Path(tempfile.gettempdir()) / f"envflux-numba-{os.getuid()}")
 
 
 _keep_cache_somewhere()

@@ -11,7 +11,7 @@ from pydantic import Field, model_validator
 
 from envflux import almanac
 from envflux.definitions import Instant
-from envflux.errors import InputError
+from envflux.errors import MISSING, InputError
 from envflux.orbits.elements import (
     Elements,
     mean_from_true,
@@ -23,7 +23,6 @@ from envflux.orbits.elements import (
 from envflux.orbits.grids import Pace
 from envflux.orbits.states import ElementStates, NoonStates
 from envflux.orbits.tracks import Trackable, dated_start
-from envflux.orbits.wording import MISSING
 from envflux.planets import EARTH
 
 # Limits of optional fields stand outside the "or None": that is where messages look for the whole range.

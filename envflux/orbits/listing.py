@@ -10,7 +10,7 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from envflux import almanac
-from envflux.errors import InputError
+from envflux.errors import InputError, Told
 from envflux.orbits.contacts import (
     PENUMBRA_ENTRY,
     PENUMBRA_EXIT,
@@ -20,7 +20,6 @@ from envflux.orbits.contacts import (
     find_contacts,
 )
 from envflux.orbits.states import SampledStates
-from envflux.orbits.wording import Told
 from envflux.schema import extend_history, stamp
 from envflux.shadows import Shadow
 

@@ -8,8 +8,7 @@ from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from xml.etree import ElementTree as ET
 
-from envflux.errors import InputError
-from envflux.orbits.wording import MISSING
+from envflux.errors import MISSING, InputError
 
 _LARGEST_BYTES = 1_000_000
 

@@ -11,11 +11,10 @@ import xarray as xr
 from numpy.typing import ArrayLike, NDArray
 
 from envflux import almanac
-from envflux.errors import InputError
+from envflux.errors import MISSING, InputError, Told
 from envflux.orbits.elements import osculating_period_s
 from envflux.orbits.states import SampledStates
 from envflux.orbits.tracks import assemble
-from envflux.orbits.wording import MISSING, Told
 from envflux.shadows import Shadow
 
 Array = NDArray[np.float64]

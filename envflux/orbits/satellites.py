@@ -13,12 +13,11 @@ from sgp4.api import SGP4_ERRORS, WGS72, Satrec
 
 from envflux import almanac
 from envflux.definitions import Instant
-from envflux.errors import InputError
+from envflux.errors import InputError, Told
 from envflux.orbits.grids import Pace
 from envflux.orbits.messages import read_message
 from envflux.orbits.states import Microseconds, State, apparent_sun, to_gcrs
 from envflux.orbits.tracks import Trackable, dated_start
-from envflux.orbits.wording import Told
 
 _LINE_LENGTH = 69
 _NUMBER_COLUMNS = {1: ((18, 20), (20, 32)), 2: ((8, 16), (17, 25), (26, 33), (34, 42), (43, 51), (52, 63))}

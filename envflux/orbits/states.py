@@ -12,10 +12,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from envflux import almanac
-from envflux.errors import InputError
+from envflux.errors import InputError, Told
 from envflux.kernels.compiling import compiled
 from envflux.orbits.elements import Elements, propagate
-from envflux.orbits.wording import Told
 from envflux.planets import EARTH
 
 Array = NDArray[np.float64]
