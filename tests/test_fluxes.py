@@ -402,6 +402,8 @@ def test_reflected_light_is_not_scaled_by_the_crafts_own_shadow(tracks):
     for factor in ("g_albedo", "g_zenith", "g_ir"):
         assert np.array_equal(one[factor].values, two[factor].values)
     assert not two.g_sun.values.any()
+    one, two = (ef.combine(each, ENVIRONMENT) for each in (one, two))
+    assert np.array_equal(one.albedo_flux.values, two.albedo_flux.values)
 
 
 def test_mirrored_beta_mirrors_the_faces():
