@@ -7,6 +7,7 @@ one sample at a time, so a piece of a track gives the same rotations as the whol
 from __future__ import annotations
 
 import math
+import warnings
 from typing import Annotated, Literal, NamedTuple, Protocol, Self, runtime_checkable
 
 import numpy as np
@@ -15,7 +16,7 @@ from pydantic import Field, field_validator, model_validator
 
 from envflux.craft import checked_direction, unit_direction
 from envflux.definitions import Definition, Listed, Vector3
-from envflux.errors import InputError
+from envflux.errors import CoarseStepWarning, InputError
 from envflux.kernels.frames import nadir_rotations
 from envflux.vectors import Array, cross, dot, norm, perpendicular, rotation_about, rotation_from_axes, unit
 from envflux.vectors import rotation_from_quaternion as _rotation_from_quaternion
@@ -23,6 +24,10 @@ from envflux.vectors import rotation_from_quaternion as _rotation_from_quaternio
 # Below this angle (rad) two directions count as parallel. Rounding turns a direction that is known to 1e-16
 # by 1e-10 here, and no spacecraft points this finely.
 _PARALLEL_RAD = 1e-6
+
+# A second axis that turns farther than this from one sample to the next is not resolved by the trapezoid of a mean.
+_FAST_SWING_DEG = 40.0
+_COS_FAST_SWING = math.cos(math.radians(_FAST_SWING_DEG))
 
 # A spin faster than this part of a revolution is averaged: the environment changes little during a turn.
 _AVERAGED_TURNS_PER_REVOLUTION = 60
@@ -194,7 +199,8 @@ class SunPointing(Definition):
     Where the Sun stands in line with `toward`, every turn about the Sun line is as near as any other, and the
     law keeps a limit. For the orbit normal (beta of 90 or -90 degrees, within 1e-6 rad) it is the limit of rising
     |beta|: ``"-orbit normal"`` becomes orbit noon x sign(beta), ``"orbit normal"`` the opposite. For nadir, zenith
-    and velocity it is the value just after the alignment. Close to it, the axis swings round fast.
+    and velocity it is the value just after the alignment. Close to it, the axis swings round fast: where it does
+    so between samples, a `CoarseStepWarning` says that orbit means want a shorter step.
     """
 
     kind: Literal["sun"] = "sun"
@@ -228,7 +234,15 @@ class SunPointing(Definition):
         """Give the body axes at each time of `track`."""
         body = _axes_from(np.array(unit_direction(self.axis)), np.array(unit_direction(self.clock_axis)))
         sun = unit(_vectors(track, "sun"))
-        return one_phase(_axes_from(sun, _turned_toward(self.toward, track, sun)) @ body.T)
+        clock = _turned_toward(self.toward, track, sun)
+        if np.any(dot(clock[1:], clock[:-1]) < _COS_FAST_SWING):
+            warnings.warn(
+                f"the Sun passes so near to '{self.toward}' that clock_axis swings by more than "
+                f"{_FAST_SWING_DEG:g} deg between samples: each sample is right, orbit means want a shorter step_s",
+                CoarseStepWarning,
+                stacklevel=2,
+            )
+        return one_phase(_axes_from(sun, clock) @ body.T)
 
 
 def _axes_from(first: Array, second: Array) -> Array:

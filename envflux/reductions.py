@@ -27,10 +27,12 @@ _WITHOUT_MEAN = frozenset(
 )
 
 # Cosines below this are rounding of zero.
-_ON_PLANE = 1e-12
+_ON_PLANE = 2e-9
 
 # The integrand drops to zero at the corner (a cosine), or jumps there (a yes or no).
-_WITH_CORNER = {"g_sun": "bends", "solar_flux": "bends", "absorbed_flux": "bends", "sun_exposure": "jumps"}
+_WITH_CORNER = {"g_sun": "bends", "solar_flux": "bends", "sun_exposure": "jumps"}
+
+_SMOOTH = frozenset(("g_albedo", "g_ir", "g_zenith", "albedo_flux", "planetary_ir_flux"))
 
 
 def orbit_mean(dataset: xr.Dataset) -> xr.Dataset:
@@ -54,8 +56,10 @@ def orbit_mean(dataset: xr.Dataset) -> xr.Dataset:
 
     Notes
     -----
-    Trapezoid rule in time between samples, with both end samples of each revolution, and with the
-    cosine's zero put where the Sun crosses a face's plane.
+    Trapezoid rule in time between samples, with both end samples of each revolution. What comes
+    from the planet bends smoothly, so the rule's leading error is taken off by the slopes at both ends
+    of each interval (Euler and Maclaurin). Direct sunlight does not; there the cosine's zero is put
+    where the Sun crosses a face's plane. The mean absorbed flux is made of the means of its parts.
     """
     revolutions = _revolutions(dataset)
     blocks = list(revolutions.blocks())
@@ -66,12 +70,17 @@ def orbit_mean(dataset: xr.Dataset) -> xr.Dataset:
             continue
         values = variable.transpose("time", ...).values
         means = [
-            block.mean(block.integrate(values[block.samples]) + _corners(dataset, name, values, block))
+            block.mean(
+                block.integrate(values[block.samples], smooth=name in _SMOOTH) + _corners(dataset, name, values, block)
+            )
             for block in blocks
         ]
         reduced[name] = (("rev", *(str(dim) for dim in variable.dims if dim != "time")), np.concatenate(means))
     kept = [name for name, coordinate in dataset.coords.items() if "time" not in coordinate.dims]
     result = xr.Dataset(reduced, coords={name: dataset.coords[name] for name in kept}, attrs=dataset.attrs)
+    if all(name in result for name in schema.FLUXES):
+        sunlight = result.absorptance * (result.solar_flux + result.albedo_flux)
+        result["absorbed_flux"] = (sunlight + result.emittance * result.planetary_ir_flux).transpose("rev", "face")
     result = result.assign_coords(rev=("rev", np.arange(revolutions.count)))
     result = schema.stamp(
         result,
@@ -224,10 +233,13 @@ class _Revolutions:
             )
             first = last
 
-    def integrate(self, values: Array) -> Array:
-        """Areas between neighbouring samples, by the trapezoid rule."""
+    def integrate(self, values: Array, *, smooth: bool = False) -> Array:
+        """Areas between neighbouring samples, by the trapezoid rule, with its correction where it is `smooth`."""
         step = self.step_s.reshape(-1, *([1] * (values.ndim - 1)))
         areas: Array = 0.5 * step * (values[1:] + values[:-1])
+        if smooth and len(values) > 2:
+            slopes = np.gradient(values, np.concatenate([[0.0], np.cumsum(self.step_s)]), axis=0, edge_order=2)
+            areas += step * step / 12.0 * (slopes[:-1] - slopes[1:])
         return areas
 
     def mean(self, areas: Array) -> Array:
@@ -271,12 +283,7 @@ def _corners(dataset: xr.Dataset, name: str, values: Array, block: _Revolutions)
     crossing = turned[1:] != turned[:-1]
     if not crossing.any():
         return 0.0
-    if name == "absorbed_flux":
-        # Of what is absorbed only the direct sunlight has the corner.
-        sunlight = dataset.solar_flux.transpose("time", "face").values[block.samples]
-        part = sunlight * dataset.absorptance.values
-    else:
-        part = values[block.samples]
+    part = values[block.samples]
     rises = turned[1:]
     lit = np.where(rises, part[1:], part[:-1])
     dark = np.where(rises, part[:-1], part[1:])

@@ -23,6 +23,9 @@ from envflux.constants import AU_KM, STEFAN_BOLTZMANN_W_M2_K4
 from envflux.definitions import Definition
 from envflux.errors import InputError
 
+# Axes that swing fast are sampled here, not averaged.
+pytestmark = pytest.mark.filterwarnings("ignore:the Sun passes so near")
+
 # WGS 84, as printed in its defining report.
 GM_KM3_S2 = 398600.4418
 

@@ -19,6 +19,9 @@ from scipy.spatial.transform import Rotation
 import envflux as ef
 from envflux import schema
 
+# Axes that swing fast are sampled here, not averaged.
+pytestmark = pytest.mark.filterwarnings("ignore:the Sun passes so near")
+
 DATA = Path(__file__).parent / "data"
 
 # The accuracy asked: at each sample, 0.1 % of the most a component can be at that altitude, which is

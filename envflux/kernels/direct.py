@@ -9,6 +9,9 @@ from envflux.vectors import Array
 
 _DEGREES = 180.0 / math.pi
 
+# A face counts as turned to the Sun from this cosine on: edge-on, rounding must not decide about minutes of Sun.
+_TURNED = 1e-9
+
 
 @compiled
 def spin_average(along: float, across: float) -> tuple[float, float]:
@@ -19,7 +22,7 @@ def spin_average(along: float, across: float) -> tuple[float, float]:
     to it the mean is 1/pi (Fortescue, Swinerd and Stark, *Spacecraft Systems Engineering*, ch. 11).
     """
     if along >= across:
-        return along, 1.0
+        return along, 1.0 if along > _TURNED else 0.0
     if along <= -across:
         return 0.0, 0.0
     half = math.acos(-along / across)
@@ -86,6 +89,7 @@ def sun_factors(
                     signed += weights[p] * cosine
                     if cosine > 0.0:
                         lit += weights[p] * cosine
+                    if cosine > _TURNED:
                         facing += weights[p]
             g_sun[i, f] = sunlit[i] * min(lit, 1.0)
             sun_incidence[i, f] = _DEGREES * math.acos(max(-1.0, min(1.0, signed)))
