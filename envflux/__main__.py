@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import sys
 
-from envflux.cli import main
+from envflux.cli import run_process
 
 if __name__ == "__main__":
-    sys.exit(main())
+    sys.exit(run_process())

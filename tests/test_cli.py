@@ -103,7 +103,7 @@ class Result(NamedTuple):
 
 
 def envflux(*arguments: str | Path, cwd: Path | None = None) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-W", "error", "-m", "envflux.cli", *map(str, arguments)]
+    command = [sys.executable, "-W", "error", "-m", "envflux", *map(str, arguments)]
     return subprocess.run(command, capture_output=True, text=True, cwd=cwd, check=False, timeout=300)
 
 
@@ -293,7 +293,7 @@ def test_progress_is_shown_on_a_terminal_only(tmp_path: Path) -> None:
     import select
 
     (tmp_path / "m.toml").write_text(MISSION, encoding="utf-8")
-    command = [sys.executable, "-m", "envflux.cli", "run", "m.toml", "--out", "out"]
+    command = [sys.executable, "-m", "envflux", "run", "m.toml", "--out", "out"]
     ours, theirs = pty.openpty()
     with subprocess.Popen(command, cwd=tmp_path, stdout=subprocess.PIPE, stderr=theirs, text=True) as run:
         out, _ = run.communicate(timeout=300)
@@ -334,17 +334,30 @@ def test_failures_midway_leave_nothing(
     code: int,
     message: str,
 ) -> None:
-    from envflux.cli import pipeline
+    from envflux import tables
 
     (tmp_path / "m.toml").write_text(MISSION, encoding="utf-8")
 
     def fail(*_: object, **__: object) -> None:
         raise failure
 
-    monkeypatch.setattr(pipeline, "write_table", fail)  # after the netCDF file is written
+    monkeypatch.setattr(tables, "write_table", fail)  # after the netCDF file is written
     assert cli.main(["run", str(tmp_path / "m.toml"), "--out", str(tmp_path / "deep" / "out")]) == code
     assert capsys.readouterr().err == message + "\n"
     assert listing(tmp_path) == ["m.toml"]
+
+
+def test_trouble_in_the_drawing_process_reaches_the_first_one(tmp_path: Path) -> None:
+    from envflux.cli.drawing import Painter
+
+    with Painter() as artist:
+        artist.order(xr.Dataset(attrs={"title": "no fluxes"}), tmp_path, "stem", "time")
+        with pytest.raises(KeyError, match="face"):
+            artist.finish(lambda: None)
+        artist.order(xr.Dataset(), tmp_path, "stem", "time")
+        artist._process.kill()
+        with pytest.raises(OSError, match="draws the pictures was stopped"):
+            artist.finish(lambda: None)
 
 
 def test_a_failed_exchange_brings_the_earlier_results_back(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -6,15 +6,18 @@ import shutil
 import sys
 import warnings
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
-import xarray as xr
 from tqdm import tqdm
 
+from envflux.cli.drawing import HISTORY, MEANS, Painter
 from envflux.cli.folders import check_folder, check_names, results_folder
 from envflux.errors import EnvfluxWarning, InputError
-from envflux.missions import Mission, load_mission
-from envflux.tables import CAUTIONS, face_lines, orbit_lines, save, write_table
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+    from envflux.missions import Mission
 
 _SUMMARY = "summary.txt"
 
@@ -38,24 +41,32 @@ def run_mission(file: str, out: str, *, replace: bool = False) -> None:
     """
     folder = Path(out)
     check_folder(folder, replace=replace)
+    # The pictures' process is started before anything else here is loaded: it has as much to load itself.
+    with Painter() as artist:
+        text, heard = _run(file, folder, artist, replace=replace)
+    print(text)
+    print(f"\nwritten to {folder}")
+    for caution in heard:
+        print(f"envflux: caution: {caution}", file=sys.stderr)
+
+
+def _run(file: str, folder: Path, artist: Painter, *, replace: bool) -> tuple[str, tuple[str, ...]]:
+    from envflux.missions import load_mission
+
     mission = load_mission(file)
     stems = {case: "--".join(case) for case in mission.cases}
     check_names(folder, [_SUMMARY, *(name for stem in stems.values() for name in _names(stem, mission))])
     with warnings.catch_warnings(record=True) as heard:
         warnings.simplefilter("always", EnvfluxWarning)
-        steps = 1 + len(stems) * (4 if mission.output.plots else 2)
-        with _progress(steps) as progress:
+        with _progress(1 + len(stems) * (3 if mission.output.plots else 2)) as progress:
             try:
-                text = _write_all(mission, folder, stems, progress, heard, replace=replace)
+                text = _write_all(mission, folder, stems, artist, progress, heard, replace=replace)
             except InputError as error:
                 if error.field == "--out":
                     raise
                 # The complaint came from a computation, but what it is about stands in the file.
                 raise InputError(f"{file}: {error.field}", error.value, error.accepted, verb=error.verb) from None
-    print(text)
-    print(f"\nwritten to {folder}")
-    for caution in _heard(heard):
-        print(f"envflux: caution: {caution}", file=sys.stderr)
+    return text, _heard(heard)
 
 
 def _progress(steps: int) -> Any:
@@ -77,67 +88,51 @@ def _write_all(
     mission: Mission,
     folder: Path,
     stems: dict[tuple[str, str], str],
+    artist: Painter,
     progress: Any,
     heard: list[Any],
     *,
     replace: bool,
 ) -> str:
+    from envflux.tables import CAUTIONS, face_lines, save, write_table
+
     progress.set_description("track")
     track = mission.fly()
     progress.update()
     lines = _heading(mission, track)
     with results_folder(folder, replace=replace) as fresh:
-        for (mode, environment), stem in stems.items():
-            progress.set_description(stem)
-            ds = mission.flux(mode, environment, track)
-            ds.attrs["title"] = f"{mission.mission.name}: {mode} mode, {environment} environment"
-            progress.update()
-            save(ds, fresh / f"{stem}.nc")
-            write_table(ds, fresh / f"{stem}.csv", title=str(ds.attrs["title"]), cautions=_heard(heard))
-            progress.update()
+        try:
+            for (mode, environment), stem in stems.items():
+                progress.set_description(stem)
+                ds = mission.flux(mode, environment, track)
+                ds.attrs["title"] = f"{mission.mission.name}: {mode} mode, {environment} environment"
+                progress.update()
+                if mission.output.plots:
+                    artist.order(ds, fresh, stem, mission.output.against)
+                save(ds, fresh / f"{stem}.nc")
+                write_table(ds, fresh / f"{stem}.csv", title=str(ds.attrs["title"]), cautions=_heard(heard))
+                progress.update()
+                lines += ["", _case_line(mission, mode, environment), *face_lines(ds)]
+            lines += ["", *(f"note: {caution}" for caution in (*CAUTIONS, *_heard(heard)))]
+            text = "\n".join(lines)
+            (fresh / _SUMMARY).write_text(text + "\n", encoding="utf-8")
             if mission.output.plots:
-                _draw(ds, fresh, stem, mission, progress)
-            lines += ["", _case_line(mission, mode, environment), *face_lines(ds)]
-        lines += ["", *(f"note: {caution}" for caution in (*CAUTIONS, *_heard(heard)))]
-        text = "\n".join(lines)
-        (fresh / _SUMMARY).write_text(text + "\n", encoding="utf-8")
+                progress.set_description("pictures")
+                artist.finish(progress.update)
+        except BaseException:
+            artist.stop()  # before the folder goes in which it may be writing
+            raise
     return text
 
 
 def _names(stem: str, mission: Mission) -> list[str]:
     endings = [".nc", ".csv", ".json"]
-    return [stem + ending for ending in endings + (["-history.png", "-means.png"] if mission.output.plots else [])]
-
-
-def _draw(ds: xr.Dataset, fresh: Path, stem: str, mission: Mission, progress: Any) -> None:
-    from envflux import plots
-
-    with plots.off_screen():
-        panels: Any = plots.flux_history(ds, against=mission.output.against)
-        _save_png(panels.ravel()[0].figure, fresh / f"{stem}-history.png")
-        progress.update()
-        if _whole_revolution(ds):
-            bars: Any = plots.orbit_mean_bars(ds)
-            _save_png(bars.figure, fresh / f"{stem}-means.png")
-        progress.update()
-
-
-def _save_png(figure: Any, path: Path) -> None:
-    # What savefig does, less its second pass through everything to find the layout; and little
-    # compression: time matters more here than a few kilobytes.
-    engine = figure.get_layout_engine()
-    if engine is not None:
-        engine.execute(figure)
-        figure.set_layout_engine("none")
-    figure.canvas.print_png(path, metadata={"Software": None}, pil_kwargs={"compress_level": 2})
-
-
-def _whole_revolution(ds: xr.Dataset) -> bool:
-    elapsed = ds["elapsed"].values
-    return bool(elapsed[-1] - elapsed[0] >= float(ds["orbital_period"]) * (1 - 1e-9))
+    return [stem + ending for ending in endings + ([HISTORY, MEANS] if mission.output.plots else [])]
 
 
 def _heading(mission: Mission, track: xr.Dataset) -> list[str]:
+    from envflux.tables import orbit_lines
+
     lines = [mission.mission.name]
     if mission.mission.description:
         lines.append(mission.mission.description)
