@@ -25,7 +25,7 @@ ROOT = Path(__file__).parents[1]
 README = (ROOT / "README.md").read_text(encoding="utf-8")
 
 # Versions of the drawing library differ in hinting and in the place of a label by a few pixels; a curve that moves
-# or a label that goes wrong changes more. Measured: labels spelt letter by letter make 0.011.
+# or a label that goes missing changes more.
 SAME_PICTURE = 0.006
 
 

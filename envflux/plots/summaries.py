@@ -139,7 +139,7 @@ def eclipse_strip(track: xr.Dataset, ax: Axes | None = None, *, title: str | Non
     ax.set_ylabel("revolution", fontsize=TEXT)
     ax.set_xlabel("minutes since the start of the revolution", fontsize=TEXT)
     if own_figure:
-        figure_title(ax, title or "Sunlight (yellow), penumbra (light grey) and umbra (dark grey)", facts_line(track))
+        figure_title(ax, title or "Sunlight (yellow), penumbra and umbra (grey)", facts_line(track))
     return ax
 
 
