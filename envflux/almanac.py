@@ -18,6 +18,7 @@ import threading
 import warnings
 from datetime import UTC, datetime, timedelta
 from functools import lru_cache
+from importlib.metadata import version
 from pathlib import Path
 from typing import Any, NamedTuple
 
@@ -154,6 +155,15 @@ def accepted_dates() -> str:
 
 _blocks: dict[int, _Block] = {}
 _lock = threading.Lock()
+
+
+@lru_cache(maxsize=1)
+def sources() -> str:
+    """What dates, frames and the Sun come from, with versions, for the record kept with results."""
+    return (
+        f"Sun: JPL ephemeris DE421 (skyfield-data {version('skyfield-data')}); "
+        f"precession IAU 2006, nutation IAU 2000A, time scales: Skyfield {version('skyfield')}"
+    )
 
 
 def _ephemeris_path() -> Path:

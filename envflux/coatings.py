@@ -7,9 +7,7 @@ surfaces age with contamination, ultraviolet light and particles: measure the fl
 from __future__ import annotations
 
 import csv
-import html
 import re
-from collections.abc import Iterable
 from dataclasses import dataclass
 from functools import cache
 from importlib.resources import files
@@ -19,6 +17,7 @@ from pydantic import ValidationInfo, field_validator, model_validator
 
 from envflux.definitions import Definition
 from envflux.errors import InputError, did_you_mean
+from envflux.markup import table
 
 Age = Literal["BOL", "EOL"]
 """Beginning or end of life."""
@@ -325,16 +324,11 @@ class CoatingList(tuple[CatalogueEntry, ...]):
             )
             for entry in self
         ]
-        return f"<table>{_row('th', heads)}{''.join(_row('td', row) for row in rows)}</table>"
+        return table(rows, heads)
 
 
 def _pair(absorptance: float | None, emittance: float | None) -> str:
     return " / ".join("not given" if value is None else f"{value:g}" for value in (absorptance, emittance))
-
-
-def _row(tag: str, cells: Iterable[str]) -> str:
-    inside = "".join(f"<{tag} style='text-align:left'>{html.escape(cell)}</{tag}>" for cell in cells)
-    return f"<tr>{inside}</tr>"
 
 
 @cache

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import html
 import math
 from collections.abc import Mapping
 from typing import Annotated, NamedTuple, Self, cast
@@ -14,6 +13,7 @@ from pydantic import Field, ValidationInfo, field_validator, model_validator
 from envflux.coatings import Coating, catalogue_coating
 from envflux.definitions import Definition, Listed, Vector3
 from envflux.errors import InputError, did_you_mean
+from envflux.markup import table
 from envflux.vectors import AXES, Array, dot, unit
 
 # Area-weighted normals of a closed surface cancel; what is left over is rounding of the normals and areas,
@@ -235,13 +235,7 @@ class Craft(Definition):
             )
             for s in self.surfaces()
         ]
-        title = html.escape(self.name) or type(self).__name__
-        return f"<b>{title}</b><table>{_row('th', heads)}{''.join(_row('td', row) for row in rows)}</table>"
-
-
-def _row(tag: str, cells: tuple[str, ...]) -> str:
-    inside = "".join(f"<{tag} style='text-align:left'>{html.escape(cell)}</{tag}>" for cell in cells)
-    return f"<tr>{inside}</tr>"
+        return table(rows, heads, title=self.name or type(self).__name__)
 
 
 def box_craft(

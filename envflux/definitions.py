@@ -6,7 +6,6 @@ kept with results. What pydantic reports is turned into one plain sentence here,
 
 from __future__ import annotations
 
-import html
 import inspect
 import types
 from collections.abc import Iterator
@@ -18,6 +17,7 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict, ValidationError
 from pydantic_core import ErrorDetails
 
 from envflux.errors import MISSING, InputError, did_you_mean
+from envflux.markup import table
 
 
 class Definition(BaseModel):
@@ -53,15 +53,26 @@ class Definition(BaseModel):
 
     @classmethod
     def __pydantic_init_subclass__(cls, **kwargs: Any) -> None:
-        # Shift-Tab in a notebook shows this: positional use is allowed, so the signature says so.
-        positional = [
-            parameter.replace(kind=inspect.Parameter.POSITIONAL_OR_KEYWORD)
-            for parameter in cls.__signature__.parameters.values()
-            if parameter.name in cls.model_fields and parameter.name != "kind"
-        ]
-        required = [p for p in positional if p.default is inspect.Parameter.empty]
-        optional = [p for p in positional if p.default is not inspect.Parameter.empty]
-        cls.__signature__ = inspect.Signature(required + optional)
+        # Shift-Tab in a notebook shows this. Where a field that must be given follows one that need not, Python
+        # can only write that with names, so names are shown; by position it works all the same.
+        fields = {name: field for name, field in cls.model_fields.items() if name != "kind"}
+        required = [field.is_required() for field in fields.values()]
+        plain = required.index(False) if False in required else len(required)
+        by_name = any(required[plain:])
+        cls.__signature__ = inspect.Signature(
+            [
+                inspect.Parameter(
+                    name,
+                    inspect.Parameter.KEYWORD_ONLY
+                    if by_name and i >= plain
+                    else inspect.Parameter.POSITIONAL_OR_KEYWORD,
+                    default=inspect.Parameter.empty
+                    if field.is_required()
+                    else field.get_default(call_default_factory=True),
+                )
+                for i, (name, field) in enumerate(fields.items())
+            ]
+        )
 
     @classmethod
     def from_table(cls, table: dict[str, Any]) -> Any:
@@ -90,13 +101,8 @@ class Definition(BaseModel):
             raise explain(error, cls) from None
 
     def _repr_html_(self) -> str:
-        rows = "".join(
-            f"<tr><td style='text-align:left'>{html.escape(name)}</td>"
-            f"<td style='text-align:left'>{html.escape(str(value))}</td></tr>"
-            for name, value in self
-            if name not in self._hidden and value is not None
-        )
-        return f"<b>{type(self).__name__}</b><table>{rows}</table>"
+        shown = [(name, str(value)) for name, value in self if name not in self._hidden and value is not None]
+        return table(shown, title=type(self).__name__)
 
 
 def utc_instant(value: object, field: str = "epoch") -> datetime:

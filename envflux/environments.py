@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import csv
-import html
-import inspect
 import math
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
@@ -20,6 +18,7 @@ from pydantic import Field, model_validator
 from envflux.constants import SOLAR_CONSTANT_W_M2
 from envflux.definitions import Definition
 from envflux.errors import InputError, did_you_mean
+from envflux.markup import table
 from envflux.vectors import Array
 
 T = TypeVar("T")
@@ -256,21 +255,6 @@ class Environment(Definition):
         return self
 
 
-# Positional order is that of the fields, the solar constant first; Python cannot show a default before
-# fields that have none, so the signature in a notebook shows it without.
-Environment.__signature__ = inspect.Signature(
-    [
-        inspect.Parameter(
-            name,
-            inspect.Parameter.POSITIONAL_OR_KEYWORD,
-            annotation=field.annotation,
-            default=inspect.Parameter.empty if name in list(Environment.model_fields)[:3] else field.default,
-        )
-        for name, field in Environment.model_fields.items()
-    ]
-)
-
-
 @dataclass(frozen=True)
 class EnvironmentPreset:
     """A published or customary set of values, each with its source and how that was read.
@@ -353,12 +337,7 @@ class EnvironmentList(tuple[EnvironmentPreset, ...]):
             )
             for preset in self
         ]
-        return f"<table>{_row('th', heads)}{''.join(_row('td', row) for row in rows)}</table>"
-
-
-def _row(tag: str, cells: Iterable[str]) -> str:
-    inside = "".join(f"<{tag} style='text-align:left'>{html.escape(cell)}</{tag}>" for cell in cells)
-    return f"<tr>{inside}</tr>"
+        return table(rows, heads)
 
 
 @cache

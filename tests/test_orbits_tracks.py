@@ -65,6 +65,7 @@ def test_contract(name):
     assert track.attrs["period_s"] == orbit.period_s == float(track.orbital_period)
     assert type(orbit).from_json(track.attrs["orbit"]) == orbit
     assert json.loads(track.attrs["request"])["revolutions"] == 2.5
+    assert ("DE421" in track.attrs["data_sources"]) == (name != "undated")
     np.testing.assert_allclose(np.linalg.norm(track.sun.values, axis=1), 1.0, atol=1e-15)
     assert track.sunlit.min() >= 0.0
     assert track.sunlit.max() <= 1.0

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from datetime import UTC, datetime, timedelta
+from importlib.metadata import version
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -31,6 +32,7 @@ class SatelliteStates:
 
     def __init__(self, satellite: Satrec, epoch_us: int, field: str) -> None:
         self.satellite, self.epoch_us, self.field = satellite, epoch_us, field
+        self.sources = f"motion: SGP4 with WGS 72 constants, sgp4 {version('sgp4')}; {almanac.sources()}"
 
     def at(self, times_us: Microseconds) -> State:
         """States at each moment, shape (n,), in GCRS.

@@ -44,6 +44,11 @@ class States(Protocol):
 
     dated: bool
 
+    @property
+    def sources(self) -> str:
+        """Where what is not declared comes from, with versions."""
+        ...
+
     def at(self, times_us: Microseconds) -> State:
         """States at each moment, shape (n,)."""
         ...
@@ -57,6 +62,7 @@ class ElementStates:
     def __init__(self, elements: Elements, epoch_us: int) -> None:
         self.elements = elements
         self.epoch_us = epoch_us
+        self.sources = almanac.sources()
 
     def at(self, times_us: Microseconds) -> State:
         """States at each moment, shape (n,), in GCRS."""
@@ -73,6 +79,7 @@ class NoonStates:
     """A circular orbit in the orbit frame: x to orbit noon, z along the normal, the Sun at rest."""
 
     dated = False
+    sources = "none: plane and Sun are as declared"
 
     def __init__(self, radius_km: float, beta_rad: float, sun_distance_au: float) -> None:
         self.radius_km = radius_km
@@ -103,6 +110,10 @@ class SampledStates:
         self.times_us, self.position, self.velocity = times_us, position, velocity
         self.sun_au = sun_au
         self.dated = dated
+        where = "positions as given; "
+        self.sources = where + (almanac.sources() if dated else "Sun as given")
+        if dated and sun_au is not None:
+            self.sources = f"{where}Sun as given; otherwise {almanac.sources()}"
 
     def at(self, times_us: Microseconds) -> State:
         """States at each moment, shape (n,), within the span of the samples."""

@@ -274,5 +274,6 @@ def assemble(
         request=json.dumps(request),
         period_s=period_s,
         step_s=step_s,
+        data_sources=states.sources,
         history="track: positions, Sun and shadow along the orbit",
     )
