@@ -146,6 +146,11 @@ class Coating(Definition):
             )
         return self
 
+    @property
+    def ages(self) -> bool:
+        """Whether it has values of its own for end of life."""
+        return self.absorptance_eol is not None or self.emittance_eol is not None
+
     def spread(self, quantity: Literal["absorptance", "emittance"], age: Age = "BOL") -> Spread:
         """Minimum, nominal and maximum of one quantity, before any electricity is taken away.
 

@@ -7,6 +7,7 @@ nothing. Keep the two apart: it is what lets one survey answer every what-if.
 
 from __future__ import annotations
 
+import json
 import os
 import warnings
 from concurrent.futures import ThreadPoolExecutor
@@ -20,7 +21,7 @@ from envflux.attitudes import AttitudeLaw, Orientation
 from envflux.coatings import Age, Bound, Cells
 from envflux.craft import Craft
 from envflux.environments import Environment, albedo_zenith_increment, solar_irradiance_w_m2
-from envflux.errors import EnvfluxWarning, InputError, OmittedTermWarning
+from envflux.errors import EnvfluxWarning, InputError, OmittedTermWarning, Told
 from envflux.kernels.direct import sun_factors
 from envflux.kernels.planet import planet_factors
 from envflux.planets import EARTH
@@ -91,6 +92,7 @@ def factors(
     from within the shadow, so it has faded to nothing there; it outlasts the Sun where the shadow's
     radius is above the radiating one.
     """
+    _check_kinds(track, law, craft)
     surfaces = craft.surfaces()
     normals = np.array([surface.normal for surface in surfaces])
     radii = np.sqrt(dot(track.position.values, track.position.values))
@@ -259,6 +261,9 @@ def _combine(factors: xr.Dataset, environment: Environment, surface: SurfaceStat
     if factors.attrs.get("radiating_radius_km") != environment.radiating_radius_km:
         accepted = f"that of the factors, {factors.attrs.get('radiating_radius_km')} km, which depend on it"
         raise InputError("radiating_radius_km", environment.radiating_radius_km, accepted)
+    craft = Craft.from_json(factors.attrs["craft"])
+    _warn_of_surfaces(craft, surface)
+    _warn_of_season(factors, environment)
     correction = environment.zenith_correction
     if correction == "element" and "g_zenith" not in factors:
         raise InputError("zenith_correction", correction, "'none' or 'sub-point' for factors made with zenith=False")
@@ -286,7 +291,6 @@ def _combine(factors: xr.Dataset, environment: Environment, surface: SurfaceStat
         albedo += scaled("g_zenith", per_time)
     infrared = scaled("g_ir", environment.planetary_ir_w_m2)
 
-    craft = Craft.from_json(factors.attrs["craft"])
     result = factors.drop_vars([name for name in schema.FACTORS if name in factors])
     result = _with_faces(result, craft, surface)
     absorbed = solar + albedo
@@ -302,6 +306,51 @@ def _combine(factors: xr.Dataset, environment: Environment, surface: SurfaceStat
         surface_state=", ".join(f"{key} {value}" for key, value in state.items()),
         omitted_terms=_omitted_terms(factors),
         history=schema.extend_history(factors, "fluxes: factors times environment and surface properties"),
+    )
+
+
+def _check_kinds(track: object, law: object, craft: object) -> None:
+    """Tell swapped or unfinished arguments by what they are, before they fail somewhere inside."""
+    if not isinstance(track, xr.Dataset) or "position" not in track or "sunlit" not in track:
+        raise InputError("track", Told(_kind(track)), "a track, as orbit.track() or track_from_arrays() makes it")
+    if not callable(getattr(law, "orient", None)):
+        raise InputError("law", Told(_kind(law)), "an attitude law, e.g. NadirPointing(), or your own with orient()")
+    if not isinstance(craft, Craft):
+        raise InputError("craft", Told(_kind(craft)), "a Craft, e.g. from box_craft(...) or Craft([face, ...])")
+
+
+def _kind(value: object) -> str:
+    return f"of type {type(value).__name__}"
+
+
+def _warn_of_surfaces(craft: Craft, surface: SurfaceState) -> None:
+    if surface.get("age") != "EOL":
+        return
+    fresh = [one.name for one in craft.surfaces() if not one.coating.ages]
+    if fresh:
+        warnings.warn(
+            EnvfluxWarning(
+                f"age is EOL, but these faces have no end-of-life values and keep those of BOL: {', '.join(fresh)}"
+            ),
+            stacklevel=4,
+        )
+
+
+# Published solar constants lie within; an irradiance at perihelion or aphelion does not.
+_SOLAR_CONSTANTS_W_M2 = (1340.0, 1385.0)
+
+
+def _warn_of_season(factors: xr.Dataset, environment: Environment) -> None:
+    low, high = _SOLAR_CONSTANTS_W_M2
+    given = environment.solar_constant_w_m2
+    if low <= given <= high or np.all(factors.sun_distance.values == 1.0):
+        return
+    warnings.warn(
+        EnvfluxWarning(
+            f"solar_constant_w_m2 is {given:g}, which no standard gives at 1 au: the distance of the Sun is counted "
+            "by itself, so an irradiance at perihelion or aphelion would count the season twice"
+        ),
+        stacklevel=4,
     )
 
 
@@ -350,7 +399,9 @@ def _checked(orientation: Orientation, times: int, law: AttitudeLaw) -> Orientat
 
 
 def _described(law: AttitudeLaw) -> str:
-    return str(law.to_json()) if hasattr(law, "to_json") else repr(law)
+    # A law of the user's own is named, not printed: the address in its repr would differ from run to run.
+    own = f"{type(law).__module__}.{type(law).__qualname__}"
+    return str(law.to_json()) if hasattr(law, "to_json") else json.dumps({"kind": own})
 
 
 # Free-molecular heating of a ram face at full accommodation, mean solar activity: km, W/m2.

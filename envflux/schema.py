@@ -25,6 +25,7 @@ class Variable:
     long_name: str
     standard_name: str | None = None
     flags: dict[str, int] | None = None
+    comment: str | None = None
 
     def attributes(self, cell_methods: str | None) -> dict[str, Any]:
         """The CF attributes of this variable."""
@@ -33,6 +34,8 @@ class Variable:
             found["units"] = self.units
         if self.standard_name:
             found["standard_name"] = self.standard_name
+        if self.comment:
+            found["comment"] = self.comment
         if self.flags:
             found["flag_values"] = list(self.flags.values())
             found["flag_meanings"] = " ".join(self.flags)
@@ -73,7 +76,9 @@ VARIABLES: dict[str, Variable] = {
     # -- faces -----------------------------------------------------------------------------------
     "face": Variable(_FACE, None, "face of the spacecraft"),
     "area": Variable(_FACE, "m2", "area of the face"),
-    "absorptance": Variable(_FACE, "1", "solar absorptance, less what is taken away as electricity"),
+    "absorptance": Variable(
+        _FACE, "1", "solar absorptance", comment="less what loaded solar cells take away as electricity"
+    ),
     "emittance": Variable(_FACE, "1", "hemispherical infrared emittance"),
     "normal": Variable(("face", "xyz"), "1", "outward unit normal in body axes"),
     # -- factors: geometry alone -----------------------------------------------------------------
@@ -82,7 +87,9 @@ VARIABLES: dict[str, Variable] = {
     "g_zenith": Variable(_TIME_FACE, "1", "albedo factor weighted by the zenith correction, per unit irradiance"),
     "g_ir": Variable(_TIME_FACE, "1", "planetary infrared factor, per unit exitance"),
     "sun_incidence": Variable(_TIME_FACE, "degree", "angle between the face's normal and the Sun"),
-    "sun_exposure": Variable(_TIME_FACE, "1", "sunlit fraction of the time the face is turned to the Sun"),
+    "sun_exposure": Variable(
+        _TIME_FACE, "1", "visible fraction of the solar disc while the face is turned to it, else 0"
+    ),
     "sun_azimuth": Variable(_TIME, "degree", "azimuth of the Sun in body axes, from +X toward +Y"),
     "sun_elevation": Variable(_TIME, "degree", "elevation of the Sun in body axes, toward +Z"),
     # -- fluxes ----------------------------------------------------------------------------------
@@ -90,7 +97,12 @@ VARIABLES: dict[str, Variable] = {
     "solar_flux": Variable(_TIME_FACE, "W m-2", "incident direct solar flux"),
     "albedo_flux": Variable(_TIME_FACE, "W m-2", "incident albedo flux"),
     "planetary_ir_flux": Variable(_TIME_FACE, "W m-2", "incident planetary infrared flux"),
-    "absorbed_flux": Variable(_TIME_FACE, "W m-2", "absorbed flux"),
+    "absorbed_flux": Variable(
+        _TIME_FACE,
+        "W m-2",
+        "absorbed flux",
+        comment="absorptance times (direct solar + albedo) plus emittance times planetary infrared",
+    ),
     # -- reductions ------------------------------------------------------------------------------
     "sunlit_fraction": Variable(("rev",), "1", "fraction of the revolution in sunlight"),
     "sun_minutes": Variable(("rev", "face"), "min", "minutes of Sun on the face per revolution"),

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import csv
 import math
+import warnings
 from pathlib import Path
 
 import numpy as np
@@ -19,8 +20,11 @@ from scipy.spatial.transform import Rotation
 import envflux as ef
 from envflux import schema
 
-# Axes that swing fast are sampled here, not averaged.
-pytestmark = pytest.mark.filterwarnings("ignore:the Sun passes so near")
+# Axes that swing fast are sampled here, not averaged; and levels are made up to tell terms apart.
+pytestmark = [
+    pytest.mark.filterwarnings("ignore:the Sun passes so near"),
+    pytest.mark.filterwarnings("ignore:solar_constant_w_m2 is"),
+]
 
 DATA = Path(__file__).parent / "data"
 
@@ -213,6 +217,7 @@ def test_fluxes_meet_the_reference_in_watts(tracks, correction):
     assert found.irradiance.values == pytest.approx(S, rel=ROUNDING)
 
 
+@pytest.mark.filterwarnings("ignore:age is EOL")
 @pytest.mark.filterwarnings("ignore:the zenith correction was fitted:envflux.EnvfluxWarning")
 @pytest.mark.parametrize("correction", ["none", "element", "sub-point"])
 def test_combining_factors_is_what_flux_does_bit_for_bit(tracks, correction):
@@ -527,3 +532,49 @@ def test_what_a_law_of_ones_own_gets_wrong_is_refused(tracks, rotations, weights
     track = tracks["400 km, beta 65"].isel(time=slice(0, 2))
     with pytest.raises(ef.InputError, match=f"Broken.{field}"):
         ef.factors(track, Broken(rotations, weights), random_craft(1, 1))
+
+
+# ------------------------------------------------------------------------ what a user is told
+
+
+def test_arguments_of_the_wrong_kind_are_told_by_their_name():
+    orbit = ef.UndatedOrbit(500.0, 20.0)
+    track, law, craft = orbit.track(), ef.NadirPointing(), ef.box_craft((1.0, 1.0, 1.0), COATING)
+    for arguments, message in (
+        ((orbit, law, craft), r"track is of type UndatedOrbit, but it must be a track"),
+        ((track, craft, law), r"law is of type Craft, but it must be an attitude law"),
+        ((track, "nadir", craft), r"law is of type str"),
+        ((track, law, [1]), r"craft is of type list, but it must be a Craft"),
+    ):
+        with pytest.raises(ef.InputError, match=message):
+            ef.flux(*arguments, ENVIRONMENT)
+
+
+def test_end_of_life_without_such_values_is_said():
+    aged = ef.Coating(absorptance=0.1, emittance=0.8, absorptance_eol=0.2)
+    craft = ef.box_craft((1.0, 1.0, 1.0), aged, coatings={"+X": COATING})
+    track = ef.UndatedOrbit(500.0, 20.0).track()
+    with pytest.warns(ef.EnvfluxWarning, match=r"no end-of-life values and keep those of BOL: \+X$"):
+        ds = ef.flux(track, ef.NadirPointing(), craft, ENVIRONMENT, age="EOL")
+    assert ds.absorptance.values.tolist() == [0.3, 0.2, 0.2, 0.2, 0.2, 0.2]
+
+
+def test_an_irradiance_in_place_of_the_solar_constant_is_said():
+    craft, law = ef.box_craft((1.0, 1.0, 1.0), COATING), ef.NadirPointing()
+    # Thermal-handbook figure at perihelion (published-values: 1322 to 1414 W/m2, from memory).
+    given = ef.Environment(solar_constant_w_m2=1414.0, albedo=0.3, planetary_ir_w_m2=237.0)
+    with pytest.warns(ef.EnvfluxWarning, match="would count the season twice"):
+        ef.flux(ef.UndatedOrbit(500.0, 20.0, 0.9833).track(), law, craft, given)
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")  # without a season there is nothing to count twice
+        ef.flux(ef.UndatedOrbit(500.0, 20.0).track(), law, craft, given)
+
+
+def test_a_law_of_the_users_own_is_named_alike_in_every_run():
+    class Own:
+        def orient(self, track):
+            return ef.NadirPointing().orient(track)
+
+    ds = ef.flux(ef.UndatedOrbit(500.0, 20.0).track(), Own(), ef.box_craft((1, 1, 1), COATING), ENVIRONMENT)
+    assert "Own" in ds.attrs["attitude"]
+    assert "0x" not in ds.attrs["attitude"]
