@@ -76,7 +76,8 @@ def plate_to_sphere(cos_tilt: float, H: float) -> float:
         return 0.0
     x = -s * cos_tilt / sin_tilt
     y = sin_tilt * math.sqrt(1.0 - x * x)
-    return (cos_tilt * inverse * math.acos(x) - s * inverse * y + math.atan(y / s)) / math.pi
+    # Just before the sphere sets behind the plate the terms cancel, and rounding could leave less than nothing.
+    return max(0.0, (cos_tilt * inverse * math.acos(x) - s * inverse * y + math.atan(y / s)) / math.pi)
 
 
 @compiled_vectorised
