@@ -6,6 +6,7 @@ import csv
 import json
 import os
 import tempfile
+import textwrap
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any, NamedTuple
@@ -13,8 +14,8 @@ from typing import Any, NamedTuple
 import numpy as np
 import xarray as xr
 
-from envflux.errors import InputError
-from envflux.orbits import eclipses
+from envflux.errors import InputError, Told
+from envflux.orbits import SunSynchronousOrbit, eclipses
 from envflux.reductions import orbit_mean
 from envflux.schema import FLUXES, VARIABLES
 from envflux.vectors import Array
@@ -32,8 +33,16 @@ CAUTIONS = (
 )
 """What someone who receives a table must know; written into every description of one."""
 
+SHORT_CAUTIONS = (
+    "Solar, albedo and IR are incident, absorbed holds a and e already: hand over one kind, never both.",
+    "Heat from the Sun and the planet alone: nothing dissipated or radiated away, no shading between parts.",
+    "For an analysis that the responsible engineer reviews; never set lamps, heaters or a chamber by it.",
+)
+"""The same in brief, for whoever reads a summary."""
+
 _SIGNIFICANT_DIGITS = 10  # of a number in a CSV: finer than any model here, short enough to read
-_VECTORS = ("position", "velocity", "sun_direction", "sun")
+_WIDTH = 110  # of a summary, in characters
+_FORMULAS = {"absorbed_flux": "absorptance * (solar_flux + albedo_flux) + emittance * planetary_ir_flux"}
 
 
 # -- netCDF ------------------------------------------------------------------------------------------
@@ -55,7 +64,13 @@ def save(ds: xr.Dataset, path: str | Path) -> Path:
     -------
     Path
         The file written.
+
+    Raises
+    ------
+    InputError
+        If the folder does not exist, or the path is one.
     """
+    path = _writable(path)
     # Whole nanoseconds are exact for dates and for times from orbit noon alike; seconds are not.
     ds = ds.drop_encoding()
     encoding: dict[Any, dict[str, Any]] = {}
@@ -73,7 +88,7 @@ def save(ds: xr.Dataset, path: str | Path) -> Path:
     def write(target: Path) -> None:
         ds.to_netcdf(target, engine="h5netcdf", encoding=encoding)
 
-    return _whole(Path(path), write)
+    return _whole(path, write)
 
 
 def load(path: str | Path) -> xr.Dataset:
@@ -118,14 +133,15 @@ def write_table(ds: xr.Dataset, path: str | Path, *, title: str = "", cautions: 
     Each column's header names the quantity, the face and the unit, e.g. ``solar_flux +X [W m-2]``. The
     description has the same name and the ending ``.json``: a tabular data resource that gives for every
     column its type, unit, meaning and face, and for the whole table the definitions that made it and
-    what to be careful about. Vectors in three components stay in the netCDF file.
+    what to be careful about. Vectors in three components stay in the netCDF file. Files of these two names
+    are replaced. Fewer columns come from fewer variables: ``write_table(ds[["absorbed_flux"]], ...)``.
 
     Parameters
     ----------
     ds : xarray.Dataset
         What `flux`, `factors`, `orbit_mean` or an orbit's `track` returns.
     path : str or Path
-        Where to write, usually ending in ``.csv``.
+        Where to write, ending in ``.csv``.
     title : str
         One line on what the table holds, for the description.
     cautions : tuple of str
@@ -139,9 +155,12 @@ def write_table(ds: xr.Dataset, path: str | Path, *, title: str = "", cautions: 
     Raises
     ------
     InputError
-        If the dataset has neither samples nor revolutions.
+        If the dataset has neither samples nor revolutions, the path does not end in ``.csv``, or its
+        folder does not exist.
     """
-    path = Path(path)
+    path = _writable(path)
+    if path.suffix.lower() != ".csv":
+        raise InputError("path", path.name, "a name that ends in .csv")
     along = next((dim for dim in ("time", "rev") if dim in ds.dims), None)
     if along is None:
         raise InputError("ds", f"a dataset over {', '.join(map(str, ds.dims)) or 'nothing'}", "one over time or rev")
@@ -197,6 +216,8 @@ def _value_column(array: xr.DataArray, name: str, label: str, face: dict[str, An
         field["unit"] = "flag"
         field["description"] += ": " + ", ".join(f"{value} = {word}" for word, value in known.flags.items())
         return _Column(f"{label} [flag]", [str(value) for value in array.values], field)
+    if name in _FORMULAS:
+        field["formula"] = _FORMULAS[name]
     texts = [str(value) for value in array.values] if whole else _texts(array.values)
     return _Column(f"{label} [{unit}]", texts, field | face)
 
@@ -211,21 +232,39 @@ def _face_facts(ds: xr.Dataset, face: str) -> dict[str, Any]:
     for name, key in (("area", "area_m2"), ("absorptance", "absorptance"), ("emittance", "emittance")):
         if name in ds:
             facts[key] = round(float(ds[name].sel(face=face)), _SIGNIFICANT_DIGITS)
+    extraction = _extraction(ds).get(face)
+    if extraction and "absorptance" in facts:
+        whole = round(facts["absorptance"] + extraction, _SIGNIFICANT_DIGITS)
+        facts["absorptance_note"] = (
+            f"solar absorptance {whole:g} less {extraction:g}, the part of incident sunlight that loaded cells "
+            "take away as electricity"
+        )
     if "normal" in ds:
         facts["normal_body"] = [float(value) for value in ds["normal"].sel(face=face).values]
     coating = _coating_names(ds).get(face)
     return facts | ({"coating": coating} if coating else {})
 
 
-def _coating_names(ds: xr.Dataset) -> dict[str, str]:
-    """Face by face, what the craft's own definition calls the coating."""
+def _coatings(ds: xr.Dataset) -> Iterator[tuple[str, dict[str, Any]]]:
+    """Face by face, the craft's own definition of its coating."""
     craft = _definitions(ds).get("craft")
-    names: dict[str, str] = {}
     for face in craft.get("faces", []) if isinstance(craft, dict) else []:
         for side, label in (("coating", face.get("name", "")), ("back", f"{face.get('name', '')} back")):
             if isinstance(face.get(side), dict):
-                names[label] = str(face[side].get("name", ""))
-    return names
+                yield label, face[side]
+
+
+def _coating_names(ds: xr.Dataset) -> dict[str, str]:
+    """Face by face, what the craft's own definition calls the coating."""
+    return {label: str(coating.get("name", "")) for label, coating in _coatings(ds)}
+
+
+def _extraction(ds: xr.Dataset) -> dict[str, float]:
+    """Part of the sunlight that leaves as electricity, of the faces where any does."""
+    if "cells unloaded" in str(ds.attrs.get("surface_state", "")):
+        return {}
+    found = {label: float(coating.get("electrical_extraction", 0.0)) for label, coating in _coatings(ds)}
+    return {label: part for label, part in found.items() if part > 0.0}
 
 
 def _definitions(ds: xr.Dataset) -> dict[str, Any]:
@@ -264,6 +303,15 @@ def _plain(value: Any) -> Any:
     return value.item() if isinstance(value, np.generic) else value
 
 
+def _writable(path: str | Path) -> Path:
+    path = Path(path)
+    if not path.parent.is_dir():
+        raise InputError("path", path.name, f"in a folder that exists, and '{path.parent}' does not")
+    if path.is_dir():
+        raise InputError("path", Told(f"the folder {path.name}"), "a file's name")
+    return path
+
+
 def _whole(path: Path, write: Callable[[Path], None]) -> Path:
     """Let `write` fill a file beside `path`, then put it in place: a failure leaves nothing half-written."""
     handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.", suffix=".part")
@@ -289,7 +337,7 @@ def _umask() -> int:
 
 
 def summary_table(ds: xr.Dataset) -> str:
-    """Say in text what a result holds: the orbit, its night, and for each face means and peak.
+    """Say in text what a result holds: the orbit, its night, and what each face receives and absorbs.
 
     Parameters
     ----------
@@ -300,43 +348,69 @@ def summary_table(ds: xr.Dataset) -> str:
     -------
     str
         Several lines, at most 110 wide where the names of faces are short. Means are over all whole
-        revolutions; a track shorter than one has none.
+        revolutions; a track shorter than one has none. Lowest and highest are those of the samples.
     """
     return "\n".join([*orbit_lines(ds), *face_lines(ds)])
 
 
 def orbit_lines(ds: xr.Dataset) -> list[str]:
-    """Period, altitude, beta angle, sunlit fraction and eclipse of a track, on two lines."""
+    """Period, altitude, beta angle, derived elements, sunlit fraction and eclipse of a track."""
     elapsed = np.asarray(ds["elapsed"].values, float)
     lit = float(np.trapezoid(ds["sunlit"].values, elapsed) / (elapsed[-1] - elapsed[0]))
     period = float(ds["orbital_period"]) / 60
     where = [f"altitude {_span(ds['altitude'].values, '.0f')} km", f"beta {_span(ds['beta'].values, '+.2f')} deg"]
+    night = f"eclipse {(1 - lit) * period:.2f} min per revolution, penumbra counted by the covered part of the disc"
     return [
         "  ".join([f"period {period:.2f} min", *where]),
-        f"sunlit {lit:.4f}  eclipse {(1 - lit) * period:.2f} min per revolution{_longest(ds)}",
+        *_derived(ds),
+        f"sunlit {lit:.4f}  {night if lit < 1.0 else 'no eclipse'}",
+        *_longest(ds),
     ]
 
 
 def face_lines(ds: xr.Dataset) -> list[str]:
-    """One line per face under a heading: orbit means of each flux, and the peak of what is absorbed."""
+    """One line per face under a heading: orbit means of each flux, range and power of what is absorbed."""
     faces = [str(face) for face in ds["face"].values]
     means = _mean_fluxes(ds)
-    peaks = np.asarray(ds["absorbed_flux"].max("time").values, float)
-    when = ds["elapsed"].values[ds["absorbed_flux"].argmax("time").values] / 60.0
-    width = max(len("face"), *(len(face) for face in faces))
-    what = "orbit mean, W m-2" if means else "less than one revolution: no orbit means"
+    absorbed = ds["absorbed_flux"].transpose("time", "face").values
+    minutes = ds["elapsed"].values[absorbed.argmax(axis=0)] / 60.0
+    total = "all faces"
+    width = max(len(total), *(len(face) for face in faces))
     lines = [
-        f"{'':{width}}  {'area':>8} {'surface':>11}   {what:<37}  {'peak':>8} {'at':>8}",
-        f"{'face':{width}}  {'m2':>8} {'a':>5} {'e':>5} {'solar':>9} {'albedo':>8} {'IR':>8} {'absorbed':>9}"
-        f"  {'absorbed':>8} {'min':>8}",
+        f"{'':{width}} {'area':>8} {'surface':>11}  {'orbit mean, W m-2':<24}   {'absorbed, W m-2':<26}{'absorbed':>9} "
+        f"{'highest':>9}",
+        f"{'face':{width}} {'m2':>8} {'a':>5} {'e':>5} {'solar':>8} {'albedo':>8} {'IR':>8}  {'mean':>8} {'lowest':>8} "
+        f"{'highest':>8} {'mean, W':>8} {'at minute':>9}",
     ]
+    powers = np.asarray(ds["area"].values, float) * means["absorbed_flux"] if means else None
     for index, face in enumerate(faces):
         values = [f"{means[name][index]:.2f}" if means else "-" for name in FLUXES]
+        power = "-" if powers is None else f"{powers[index]:.2f}"
         surface = f"{float(ds['absorptance'][index]):5.3f} {float(ds['emittance'][index]):5.3f}"
         lines.append(
-            f"{face:{width}}  {float(ds['area'][index]):8.4g} {surface} {values[0]:>9} {values[1]:>8} {values[2]:>8} "
-            f"{values[3]:>9}  {peaks[index]:8.2f} {when[index]:8.2f}"
+            f"{face:{width}} {float(ds['area'][index]):8.4g} {surface} {values[0]:>8} {values[1]:>8} {values[2]:>8}  "
+            f"{values[3]:>8} {absorbed[:, index].min():8.2f} {absorbed[:, index].max():8.2f} {power:>8} "
+            f"{minutes[index]:9.2f}"
         )
+    if powers is None:
+        lines.append("less than one revolution: no orbit means")
+    else:
+        lines.append(f"{total:{width + 76}} {powers.sum():8.2f}")
+    return [*lines, "minutes from the start of the track; power is area times mean absorbed flux", *_cells_note(ds)]
+
+
+def _cells_note(ds: xr.Dataset) -> list[str]:
+    """Say of which faces the absorptance shown is less than that of the surface."""
+    alike: dict[tuple[float, float], list[str]] = {}
+    for face, part in _extraction(ds).items():
+        whole = round(float(ds["absorptance"].sel(face=face)) + part, _SIGNIFICANT_DIGITS)
+        alike.setdefault((whole, part), []).append(face)
+    lines = []
+    for (whole, part), faces in alike.items():
+        text = (
+            f"a of {', '.join(faces)}: {whole:g} less the {part:g} of the sunlight that loaded cells make electricity"
+        )
+        lines += textwrap.wrap(text, _WIDTH, subsequent_indent="  ")
     return lines
 
 
@@ -349,15 +423,24 @@ def _mean_fluxes(ds: xr.Dataset) -> dict[str, Array]:
     return {name: np.asarray(means[name].mean("rev").values, float) for name in FLUXES}
 
 
-def _longest(ds: xr.Dataset) -> str:
+def _derived(ds: xr.Dataset) -> list[str]:
+    """Elements that the user did not give but another tool may ask for."""
+    orbit = _definitions(ds).get("orbit", {})
+    if orbit.get("kind") != "sun-synchronous":
+        return []
+    made = SunSynchronousOrbit.from_table(orbit)
+    return [f"inclination {made.inclination_deg:.4f} deg and, at the epoch, RAAN {made.raan_deg:.4f} deg"]
+
+
+def _longest(ds: xr.Dataset) -> list[str]:
     """Say how long the longest eclipse is from first to last contact, if one is whole."""
     table = eclipses(ds)
     whole = np.asarray(table["penumbra_duration_s"].values, float)
     if np.isnan(whole).all():
-        return ""
+        return []
     longest = int(np.nanargmax(whole))
     umbra = float(table["umbra_duration_s"][longest]) / 60
-    return f"; longest {whole[longest] / 60:.2f} min contact to contact, umbra {umbra:.2f} min"
+    return [f"longest eclipse: {whole[longest] / 60:.2f} min from first to last contact, {umbra:.2f} of them in umbra"]
 
 
 def _span(values: Array, form: str) -> str:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import json
+import re
 from pathlib import Path
 from typing import Any
 
@@ -14,14 +15,15 @@ import xarray as xr
 
 from envflux import tables
 from envflux.attitudes import NadirPointing
-from envflux.coatings import Coating
+from envflux.coatings import Cells, Coating
 from envflux.craft import Craft, Face
 from envflux.environments import Environment
 from envflux.errors import InputError
 from envflux.fluxes import factors, flux
-from envflux.orbits import CircularOrbit, UndatedOrbit, eclipses
+from envflux.orbits import CircularOrbit, SunSynchronousOrbit, UndatedOrbit, eclipses
 from envflux.reductions import orbit_mean
-from envflux.tables import load, save, summary_table, write_table
+from envflux.schema import FLUXES, INCIDENT, VARIABLES
+from envflux.tables import load, orbit_lines, save, summary_table, write_table
 
 TEN_DIGITS = 5e-10  # what ten significant digits in the table lose at most, relative
 
@@ -162,18 +164,92 @@ def test_table_needs_rows(tmp_path: Path, ds: xr.Dataset) -> None:
         )
 
 
-def test_summary_shows_the_means_and_the_peak(ds: xr.Dataset) -> None:
-    text = summary_table(ds)
-    line = next(line for line in text.splitlines() if line.startswith("wing, left  "))
-    shown = [float(word) for word in line.removeprefix("wing, left").split()]
-    means = orbit_mean(ds).mean("rev").sel(face="wing, left")
-    expected = [0.37, 0.21, 0.87]
-    expected += [
-        round(float(means[name]), 2) for name in ("solar_flux", "albedo_flux", "planetary_ir_flux", "absorbed_flux")
+@pytest.mark.parametrize("of", ["flux", "orbit mean"])
+def test_a_slim_table_has_just_what_was_chosen(tmp_path: Path, ds: xr.Dataset, of: str) -> None:
+    whole = ds if of == "flux" else orbit_mean(ds)
+    path = write_table(whole[["absorbed_flux"]], tmp_path / "x.csv")
+    header = list(rows(path)[0])
+    assert [name for name in header if name.split()[0] in VARIABLES and len(VARIABLES[name.split()[0]].dims) > 1] == [
+        "absorbed_flux wing, left [W m-2]",
+        "absorbed_flux wing, left back [W m-2]",
     ]
-    absorbed = ds["absorbed_flux"].sel(face="wing, left")
-    expected += [round(float(absorbed.max()), 2), round(float(ds["elapsed"][int(absorbed.argmax("time"))]) / 60, 2)]
-    assert shown == expected
+    np.testing.assert_allclose(
+        [float(row["absorbed_flux wing, left back [W m-2]"]) for row in rows(path)],
+        whole["absorbed_flux"].sel(face="wing, left back"),
+        rtol=TEN_DIGITS,
+    )
+
+
+def test_table_says_where_it_cannot_go(tmp_path: Path, ds: xr.Dataset) -> None:
+    with pytest.raises(InputError, match=r"^path is 'x.txt', but it must be a name that ends in .csv$"):
+        write_table(ds, tmp_path / "x.txt")
+    (tmp_path / "folder.csv").mkdir()
+    for write in (write_table, save):
+        with pytest.raises(
+            InputError, match=r"^path is 'x.csv', but it must be in a folder that exists, and '.*none' does"
+        ):
+            write(ds, tmp_path / "none" / "x.csv")
+        with pytest.raises(InputError, match=r"^path is the folder folder.csv, but it must be a file's name$"):
+            write(ds, tmp_path / "folder.csv")
+    assert [entry.name for entry in tmp_path.iterdir()] == ["folder.csv"]
+
+
+def test_table_replaces_both_files_of_before(tmp_path: Path, ds: xr.Dataset) -> None:
+    for name in ("x.csv", "x.json"):
+        (tmp_path / name).write_text("before")
+    write_table(ds, tmp_path / "x.csv")
+    assert all((tmp_path / name).read_text(encoding="utf-8") != "before" for name in ("x.csv", "x.json"))
+
+
+def with_cells(cells: Cells) -> xr.Dataset:
+    solar = Coating(0.9, 0.82, electrical_extraction=0.24, name="cells")
+    craft = Craft((Face("panel", "-Z", 2.5, solar, back=PAINT), Face("other", "+X", 1.0, solar)))
+    return flux(ORBITS["undated"].track(step_s=60), NadirPointing(), craft, ENVIRONMENT, cells=cells)
+
+
+def test_electricity_is_said_where_it_is_taken_away(tmp_path: Path) -> None:
+    loaded, unloaded = with_cells("loaded"), with_cells("unloaded")
+    note = "a of panel, other: 0.9 less the 0.24 of the sunlight that loaded cells make electricity"
+    assert note in summary_table(loaded).splitlines()
+    assert "electricity" not in summary_table(unloaded)
+    for ds, absorptance in ((loaded, 0.66), (unloaded, 0.9)):
+        path = write_table(ds, tmp_path / "x.csv").with_suffix(".json")
+        fields = {field["name"]: field for field in json.loads(path.read_text(encoding="utf-8"))["schema"]["fields"]}
+        panel = fields["absorbed_flux panel [W m-2]"]
+        assert panel["absorptance"] == absorptance
+        said = panel.get("absorptance_note", "")
+        assert ("solar absorptance 0.9 less 0.24" in said) == (ds is loaded)
+        assert "absorptance_note" not in fields["absorbed_flux panel back [W m-2]"]
+
+
+def test_the_formula_told_gives_the_column(tmp_path: Path, ds: xr.Dataset) -> None:
+    path = write_table(ds, tmp_path / "x.csv")
+    told = json.loads(path.with_suffix(".json").read_text(encoding="utf-8"))["schema"]["fields"]
+    field = next(field for field in told if field["name"] == "absorbed_flux wing, left [W m-2]")
+    for row in rows(path)[::20]:
+        parts = {name: float(row[f"{name} wing, left [W m-2]"]) for name in INCIDENT}
+        value = eval(field["formula"], {name: field[name] for name in ("absorptance", "emittance")} | parts)
+        # Four numbers of ten digits each.
+        assert float(row[field["name"]]) == pytest.approx(value, rel=4 * TEN_DIGITS)
+
+
+def test_summary_shows_means_range_and_power(ds: xr.Dataset) -> None:
+    text = summary_table(ds)
+    means = orbit_mean(ds).mean("rev")
+    power = 0.0
+    for face, absorptance, emittance in (("wing, left", 0.21, 0.87), ("wing, left back", 0.93, 0.79)):
+        line = next(line for line in text.splitlines() if line.startswith(f"{face:15} "))
+        shown = [float(word) for word in line.removeprefix(face).split()]
+        mean = {name: float(means[name].sel(face=face)) for name in FLUXES}
+        absorbed = ds["absorbed_flux"].sel(face=face)
+        minute = float(ds["elapsed"][int(absorbed.argmax("time"))]) / 60
+        expected = [0.37, absorptance, emittance, *mean.values()]
+        expected += [float(absorbed.min()), float(absorbed.max()), 0.37 * mean["absorbed_flux"], minute]
+        assert shown == [round(value, 2) if i > 2 else value for i, value in enumerate(expected)]
+        power += 0.37 * mean["absorbed_flux"]
+    total = next(line for line in text.splitlines() if line.startswith("all faces "))
+    assert total.split() == ["all", "faces", f"{power:.2f}"]
+    assert len(total) == line.index(f" {shown[-2]:.2f}") + len(f" {shown[-2]:.2f}")  # it stands under the powers
     assert "min per revolution" in text
     assert max(len(line) for line in text.splitlines()) <= 110
 
@@ -182,3 +258,23 @@ def test_summary_of_less_than_a_revolution_has_no_means() -> None:
     part = flux(ORBITS["undated"].track(duration_s=1800, step_s=60), NadirPointing(), CRAFT, ENVIRONMENT)
     text = summary_table(part)
     assert "less than one revolution: no orbit means" in text
+    assert "all faces" not in text
+
+
+def test_summary_gives_the_derived_elements() -> None:
+    orbit = SunSynchronousOrbit(altitude_km=560, ltdn_hours=10.5, epoch="2031-03-20T06:00:00Z")
+    (line,) = [line for line in orbit_lines(orbit.track()) if "inclination" in line]
+    inclination, raan = (float(word) for word in re.findall(r"[0-9]+\.[0-9]+", line))
+    # By hand: cos i = -rate / (1.5 J2 (R/a)^2 n), the textbook's first-order drift of the node, at 360 deg a tropical
+    # year of 365.24219 d, with a = 6938.137 km (formula and figures from memory).
+    rate = 2 * np.pi / (365.24219 * 86400)
+    n = np.sqrt(398600.4418 / 6938.137**3)
+    by_hand = np.degrees(np.arccos(-rate / (1.5 * 1.08262668e-3 * (6378.137 / 6938.137) ** 2 * n)))
+    assert inclination == pytest.approx(by_hand, abs=1e-4)  # four decimals are printed
+    assert raan == pytest.approx(orbit.raan_deg, abs=1e-4)
+    assert not any("inclination" in line for line in orbit_lines(ORBITS["undated"].track()))
+
+
+def test_summary_without_an_eclipse_says_so() -> None:
+    lines = orbit_lines(UndatedOrbit(altitude_km=700, beta_deg=90).track())
+    assert lines[-1] == "sunlit 1.0000  no eclipse"
