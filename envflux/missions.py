@@ -21,7 +21,7 @@ from envflux.coatings import Age, Bound, Cells, Coating, catalogue_coating
 from envflux.craft import Craft, Face, box_craft
 from envflux.definitions import Definition, Instant, Vector3
 from envflux.environments import Environment, environment_preset
-from envflux.errors import MISSING, InputError, Told, did_you_mean
+from envflux.errors import MISSING, InputError, Told, did_you_mean, shown
 from envflux.fluxes import SurfaceState, flux
 from envflux.orbits import OmmOrbit, Orbit
 
@@ -80,9 +80,11 @@ class Mode(Definition):
     age : {"BOL", "EOL"}
         Surfaces at beginning or end of life.
     bound : {"minimum", "nominal", "maximum"}
-        Which end of each coating's spread.
+        Which end of each coating's spread, for absorptance and emittance alike. Neither end alike is
+        the hot one: see the next two.
     bound_absorptance, bound_emittance : {"minimum", "nominal", "maximum"}, optional
-        The same for one of the two: a hot bound has high absorptance and low emittance.
+        The same for one of the two. Hot is the maximum of absorptance with the minimum of emittance,
+        cold the other way round.
     cells : {"loaded", "unloaded"}
         Whether solar cells deliver power, or are open-circuit or shunted: the hot case is usually
         unloaded.
@@ -311,8 +313,9 @@ def _craft(table: dict[str, Any], coatings: dict[str, Coating]) -> Craft:
     if not isinstance(listed, list):
         raise InputError("craft.faces", listed, "a list of tables, each headed [[craft.faces]]")
     for number, entry in enumerate(listed, start=1):
-        field = f"craft.faces.{number}"
-        face = dict(_table(entry, field))
+        face = dict(_table(entry, f"craft.faces.{number}"))
+        name = face.get("name")  # easier to find in a long file than its number
+        field = f"craft.faces.{number}" + (f" ({shown(Told(name), 40)})" if isinstance(name, str) else "")
         for side in ("coating", "back"):
             if side in face:
                 face[side] = _named_coating(face[side], coatings, f"{field}.{side}")
