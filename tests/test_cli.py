@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import json
 import os
+import re
 import subprocess
 import sys
 from concurrent.futures import ThreadPoolExecutor
@@ -16,9 +17,16 @@ import pytest
 import xarray as xr
 
 from envflux import cli
+from envflux.attitudes import AnyAttitude
+from envflux.cli import keys
 from envflux.cli.folders import MANIFEST, results_folder
+from envflux.coatings import Coating
+from envflux.craft import Face
+from envflux.definitions import Definition, _members, _tag_of
+from envflux.environments import Environment
 from envflux.errors import InputError
-from envflux.missions import load_mission
+from envflux.missions import Mode, Output, TrackRequest, load_mission
+from envflux.orbits import Orbit
 from envflux.tables import load
 
 EXAMPLES = Path(__file__).parents[1] / "examples"
@@ -80,8 +88,11 @@ BAD: dict[str, tuple[tuple[str, str], tuple[str, ...]]] = {
     ),
     "date outside the ephemeris": (("2031-03-20T06", "2131-03-20T06"), ("orbit.epoch is '2131-03-20", "2053")),
     "naive epoch": (("06:00:00Z", "06:00:00"), ("orbit.epoch is '2031-03-20T06:00:00'", "time zone")),
-    "zero normal": ((CRAFT, FACE + "normal = [0, 0, 0]\n"), ("craft.faces.1.normal is [0, 0, 0]", "not all zero")),
-    "normal not finite": ((CRAFT, FACE + "normal = [0, nan, 1]\n"), ("craft.faces.1.normal", "nan", "finite")),
+    "zero normal": (
+        (CRAFT, FACE + "normal = [0, 0, 0]\n"),
+        ("craft.faces.1 (plate).normal is [0, 0, 0]", "not all zero"),
+    ),
+    "normal not finite": ((CRAFT, FACE + "normal = [0, nan, 1]\n"), ("craft.faces.1 (plate).normal", "nan", "finite")),
     "absorptance": (
         ("absorptance = 0.25", "absorptance = 1.25"),
         ("craft.box.coating.absorptance is 1.25", "from 0 to 1"),
@@ -248,6 +259,16 @@ def test_a_coarse_step_is_a_caution_not_an_error(tmp_path: Path, capsys: pytest.
             ["run", "none.toml", "--out", "x"],
             "envflux: none.toml is missing, but it must be a mission file that exists",
         ),
+        # The missing file comes before whatever is wrong with the folder.
+        (
+            ["run", "none.toml", "--out", "."],
+            "envflux: none.toml is missing, but it must be a mission file that exists",
+        ),
+        (["run", ".", "--out", "x"], "envflux: . is a folder, but it must be a mission file that exists"),
+        (
+            ["run", "m.toml", "--out", "m.toml/deep/x"],
+            "envflux: --out is 'm.toml/deep/x', but it must be a folder that can be written to (Not a directory)",
+        ),
         (["run", "m.toml", "--out", "m.toml"], "envflux: --out is 'm.toml', but it must be a folder"),
         (["run", "m.toml"], "envflux run: the following arguments are required: --out"),
         (["rum"], "envflux: argument COMMAND: invalid choice: 'rum'"),
@@ -285,6 +306,73 @@ def test_help_teaches_without_loading_the_rest() -> None:
     assert done.stdout.endswith("[]\n")
     for word in ("--out", "--replace", "[modes.NAME]", "catalogue", "MODE--ENVIRONMENT.csv"):
         assert word in done.stdout
+
+
+def all_keys() -> dict[str, tuple[type[Definition], tuple[str, str]]]:
+    kinds = {**keys.ORBITS, **keys.ATTITUDES}
+    models = {_tag_of(model): model for union in (Orbit, AnyAttitude) for model in _members(union)}
+    assert set(models) == set(kinds)
+    tables = {
+        "[track]": TrackRequest, "[coatings.NAME]": Coating, "[[craft.faces]]": Face, "[modes.NAME]": Mode,
+        "[environments.NAME]": Environment, "[output]": Output,
+    }  # fmt: skip
+    assert set(tables) == set(keys.TABLES)
+    return {str(name): (model, {**kinds, **keys.TABLES}[str(name)]) for name, model in {**models, **tables}.items()}
+
+
+@pytest.mark.parametrize("name", [*keys.ORBITS, *keys.ATTITUDES, *keys.TABLES])
+def test_help_lists_the_keys_there_are(name: str) -> None:
+    model, (needed, optional) = all_keys()[name]
+    fields = {field: info.is_required() for field, info in model.model_fields.items() if field != "kind"}
+    assert sorted(needed.split()) == sorted(field for field, required in fields.items() if required)
+    assert sorted(optional.split()) == sorted(field for field, required in fields.items() if not required)
+    for key in fields:
+        assert re.search(rf"\b{key}\b", cli._RUN_EPILOG), key
+
+
+def test_help_is_no_wider_than_a_terminal_may_be() -> None:
+    assert max(map(len, cli._RUN_EPILOG.splitlines())) <= 102
+
+
+TWO_CASES = """
+[modes.turned]
+attitude = {kind = "nadir", roll_deg = 12.5}
+age = "EOL"
+[modes.turning]
+attitude = {kind = "spinning", axis = [0, 1, 1], about = "sun", rate_rpm = 10}
+"""
+
+
+def test_summary_says_how_each_case_flies_and_what_to_mind_first(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    text = MISSION.replace("step_s = 60", "step_s = 120") + TWO_CASES
+    (tmp_path / "m.toml").write_text(text, encoding="utf-8")
+    assert cli.main(["run", str(tmp_path / "m.toml"), "--out", str(tmp_path / "out")]) == 0
+    lines = capsys.readouterr().out.splitlines()
+    assert "[nadir / mean]  nadir attitude" in lines
+    assert "[turned / mean]  nadir attitude: roll 12.5 deg" in lines
+    turning = "spinning attitude: axis [0, 1, 1], about sun, rate 10 rpm, averaged over the turn"
+    assert f"[turning / mean]  {turning}" in lines
+    starts = [line.split(":")[0] for line in lines]
+    assert max(i for i, start in enumerate(starts) if start == "caution") < starts.index("note")
+    assert starts.count("note") <= 3
+    # The step is everybody's; the age is said of the one case that asked for it, in its own files alone.
+    step, age = (line for line in lines if line.startswith("caution"))
+    assert "step_s" in step
+    assert age.startswith("caution: [turned / mean] age is EOL")
+    for mode in ("nadir", "turned"):
+        told = json.loads((tmp_path / "out" / f"{mode}--mean.json").read_text(encoding="utf-8"))
+        assert any("age is EOL" in caution for caution in told["cautions"]) == (mode == "turned")
+        assert any("step_s" in caution for caution in told["cautions"])
+    assert max(map(len, lines[: starts.index("caution")])) <= 110
+
+
+def test_undated_is_said_once(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    undated = '[orbit]\nkind = "undated"\naltitude_km = 560\nbeta_deg = 10\n'
+    (tmp_path / "m.toml").write_text(MISSION.replace(ORBIT, undated), encoding="utf-8")
+    assert cli.main(["run", str(tmp_path / "m.toml"), "--out", str(tmp_path / "out")]) == 0
+    assert "undated orbit, 1 revolution from orbit noon" in capsys.readouterr().out.splitlines()
 
 
 @pytest.mark.skipif(os.name != "posix", reason="pseudo-terminals are a Unix thing")
@@ -384,6 +472,18 @@ def test_a_failed_exchange_brings_the_earlier_results_back(tmp_path: Path, monke
     with pytest.raises(OSError, match="disk full"):
         again()
     assert {name: (out / name).read_text() for name in listing(out)} == before
+
+
+def test_trouble_with_the_disk_names_no_file_of_ours(tmp_path: Path) -> None:
+    out = tmp_path / "deep" / "out"
+
+    def run() -> None:
+        with results_folder(out, replace=False) as fresh:
+            raise OSError(28, "No space left on device", str(fresh / "a.nc"))
+
+    with pytest.raises(OSError, match=r"No space left on device: '[^']*deep.out'$"):
+        run()
+    assert listing(tmp_path) == []
 
 
 def test_someone_who_came_first_is_not_overwritten(tmp_path: Path) -> None:

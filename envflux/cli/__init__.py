@@ -13,6 +13,7 @@ from collections.abc import Sequence
 from importlib.metadata import version
 from typing import NoReturn
 
+from envflux.cli.keys import ATTITUDES, ORBITS, TABLES, listed
 from envflux.errors import InputError
 
 OK, FAILED, WRONG_INPUT, INTERRUPTED = 0, 1, 2, 130
@@ -35,18 +36,30 @@ The numbers are inputs to a thermal analysis that the responsible engineer revie
 against the programme's own standards and margins.
 """
 
-_RUN_EPILOG = """\
+_RUN_EPILOG = f"""\
 FILE.toml has these tables:
   [mission]              name, description
   [orbit]                kind = "circular", "sun-synchronous", "kepler", "undated", "tle" or "omm",
                          and what that kind needs (altitude_km, epoch, ...)
   [track]                revolutions or duration_s, step_s, start     (left out: one revolution)
   [coatings.NAME]        absorptance, emittance, ... or catalogue = "C025"
-  [craft]                box = {size_m = [x, y, z], coating = "NAME"}, and/or
+  [craft]                box = {{size_m = [x, y, z], coating = "NAME"}}, and/or
   [[craft.faces]]        name, normal, area_m2, coating, back
-  [modes.NAME]           attitude = {kind = "nadir", ...}, age, bound, cells
+  [modes.NAME]           attitude = {{kind = "nadir", ...}}, age, bound, cells
   [environments.NAME]    solar_constant_w_m2, albedo, planetary_ir_w_m2, or preset = "..."
   [output]               plots, against                               (optional)
+
+Keys of [orbit], by kind; those in brackets may be left out:
+{listed(ORBITS)}
+sun-synchronous needs one of ltan_hours and ltdn_hours; kepler the semi-major axis or both altitudes.
+tle and omm take file = "..." in place of the rest.
+
+Keys of attitude, by kind:
+{listed(ATTITUDES)}
+
+Keys of other tables:
+{listed(TABLES)}
+Hot is bound_absorptance = "maximum" with bound_emittance = "minimum".
 
 For every mode and environment DIR receives
   MODE--ENVIRONMENT.nc         everything, netCDF-4 with CF attributes

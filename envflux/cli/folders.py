@@ -34,11 +34,16 @@ def check_folder(folder: Path, *, replace: bool, besides: Path | None = None) ->
     Raises
     ------
     InputError
-        If it is a file, or holds anything and `replace` is not set.
+        If it is a file, cannot be looked into, or holds anything and `replace` is not set.
     """
-    if folder.exists() and not folder.is_dir():
+    try:
+        in_use = folder.exists() and not folder.is_dir()
+        filled = not in_use and folder.is_dir() and any(path != besides for path in folder.iterdir())
+    except OSError as error:
+        raise _unwritable(folder, error) from None
+    if in_use:
         raise InputError("--out", str(folder), "a folder, or a name not used yet")
-    if not replace and folder.is_dir() and any(path != besides for path in folder.iterdir()):
+    if not replace and filled:
         raise InputError("--out", str(folder), "empty or new, or --replace given", verb="it holds files and must be")
 
 
@@ -80,14 +85,18 @@ def results_folder(folder: Path, *, replace: bool) -> Iterator[Path]:
     Raises
     ------
     InputError
-        If a file of the user's own stands in the way.
+        If the folder cannot be written to, or a file of the user's own stands in the way.
     """
-    folder = folder.resolve()
+    asked, folder = folder, folder.resolve()
     made = _missing_parents(folder)
-    folder.parent.mkdir(parents=True, exist_ok=True)
-    # Inside the folder where there is one: it may be a file system of its own, or its parent be read-only.
-    beside = folder if folder.is_dir() else folder.parent
-    work = Path(tempfile.mkdtemp(dir=beside, prefix=f".{folder.name}.", suffix=".part"))
+    try:
+        folder.parent.mkdir(parents=True, exist_ok=True)
+        # Inside the folder where there is one: it may be a file system of its own, or its parent be read-only.
+        beside = folder if folder.is_dir() else folder.parent
+        work = Path(tempfile.mkdtemp(dir=beside, prefix=f".{folder.name}.", suffix=".part"))
+    except OSError as error:
+        _remove_empty(made)
+        raise _unwritable(asked, error) from None
     try:
         fresh = work / "new"
         fresh.mkdir()
@@ -99,14 +108,25 @@ def results_folder(folder: Path, *, replace: bool) -> Iterator[Path]:
         check_folder(folder, replace=replace, besides=work)
         check_names(folder, [*names, MANIFEST])
         _move_in(fresh, folder, work / "old")
-    except BaseException:
+    except BaseException as error:
         # As it was before, also where only the way to the folder was new.
         shutil.rmtree(work, ignore_errors=True)
-        for parent in made:
-            if parent.is_dir() and not any(parent.iterdir()):
-                parent.rmdir()
+        _remove_empty(made)
+        if isinstance(error, OSError) and str(work) in str(error.filename):
+            # The file it names is gone, and never was one that the user knows.
+            raise OSError(error.errno, error.strerror, str(asked)) from error
         raise
     shutil.rmtree(work, ignore_errors=True)
+
+
+def _unwritable(folder: Path, error: OSError) -> InputError:
+    return InputError("--out", str(folder), f"a folder that can be written to ({error.strerror})")
+
+
+def _remove_empty(folders: list[Path]) -> None:
+    for folder in folders:
+        if folder.is_dir() and not any(folder.iterdir()):
+            folder.rmdir()
 
 
 def _missing_parents(folder: Path) -> list[Path]:
