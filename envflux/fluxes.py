@@ -134,7 +134,7 @@ def factors(
             radiating_radius_km,
             g_albedo[part],
             g_ir[part],
-            g_zenith[part] if zenith else g_zenith,
+            g_zenith[part] if zenith else None,
         )
         if rotations.shape[1] == 1:
             body_sun[part] = np.einsum("tji,tj->ti", rotations[:, 0], sun)

@@ -38,8 +38,7 @@ _TO_POWERS = np.linalg.inv(np.vander(_CHEBYSHEV, increasing=True))
 
 # Rows of the table that holds what the rings of one instant have in common.
 _COS_NADIR, _SIN_NADIR, _SUN_MEAN, _SUN_SWING, _LIT, _COS_LIT, _SIN_LIT, _WEIGHT = range(8)
-_ZENITH = 8  # first of the rows with polynomial coefficients
-RING_ROWS = _ZENITH + DEGREE + 1
+RING_ROWS = 8
 
 _TWO_PI = 2.0 * math.pi
 _DEGREES = 180.0 / math.pi
@@ -133,15 +132,15 @@ def _antiderivative(
 
 @compiled_vectorised
 def _antiderivative_by_zenith(
-    p: float, c: float, s: float, rings: Array, k: int, up: float, ahead: float, aside: float
+    p: float, c: float, s: float, sunlight: Array, k: int, up: float, ahead: float, aside: float
 ) -> float:
-    """As `_antiderivative`, with the sunlight and its weight given as a polynomial in cos p."""
+    """As `_antiderivative`, with the weighted sunlight given as a polynomial in cos p, column k of `sunlight`."""
     even, odd, power = p, s, 1.0
     total = 0.0
     for j in range(0, DEGREE + 1, 2):
         # even, odd: integrals of cos**j and cos**(j + 1), each from the one two steps before.
-        q0 = rings[_ZENITH + j, k]
-        q1 = rings[_ZENITH + j + 1, k]
+        q0 = sunlight[j, k]
+        q1 = sunlight[j + 1, k]
         total += q0 * (up * even + ahead * odd - aside * power * c / (j + 1))
         power = power * c
         even = (power * s + (j + 1) * even) / (j + 2)
@@ -152,19 +151,17 @@ def _antiderivative_by_zenith(
 
 
 @compiled_vectorised
-def reflected(nx: float, ny: float, nz: float, whole: bool, weighted: bool, rings: Array) -> float:
+def reflected(nx: float, ny: float, nz: float, rings: Array, sunlight: Array | None) -> float:
     """Albedo factor of a plate: flux per unit albedo and irradiance, Lambertian planet.
 
     Parameters
     ----------
     nx, ny, nz : float
         The plate's normal in local axes (see the module's text).
-    whole : bool
-        True: the face's plane is ignored, which makes the result linear in the normal.
-    weighted : bool
-        True: weigh each planet element with `zenith_increment` of its solar zenith angle.
     rings : ndarray (RING_ROWS, RINGS)
-        From `prepare_rings`, and from `prepare_zenith` where `weighted`.
+        From `prepare_rings`.
+    sunlight : ndarray (DEGREE + 1, RINGS), optional
+        From `prepare_zenith`: each planet element is weighted with `zenith_increment`.
     """
     horizontal = math.sqrt(nx * nx + ny * ny)
     level = horizontal < 1e-14
@@ -181,7 +178,7 @@ def reflected(nx: float, ny: float, nz: float, whole: bool, weighted: bool, ring
         sin_lit = rings[_SIN_LIT, k]
         # Half the arc on which the plate sees the ring, centred on the plate's azimuth d.
         cos_seen = slope * cos_nadir / sin_nadir
-        cos_seen = -1.0 if (cos_seen < -1.0 or whole) else cos_seen
+        cos_seen = -1.0 if cos_seen < -1.0 else cos_seen
         cos_seen = 1.0 if cos_seen > 1.0 else cos_seen
         seen = _arccos(cos_seen)
         sin_seen = math.sqrt(1.0 - cos_seen * cos_seen)
@@ -203,13 +200,13 @@ def reflected(nx: float, ny: float, nz: float, whole: bool, weighted: bool, ring
         up = nz * cos_nadir
         ahead = sin_nadir * horizontal * cos_d
         aside = sin_nadir * horizontal * sin_d
-        if weighted:
+        if sunlight is not None:
             value = near * (
-                _antiderivative_by_zenith(hi, cos_hi, sin_hi, rings, k, up, ahead, aside)
-                - _antiderivative_by_zenith(lo, cos_lo, sin_lo, rings, k, up, ahead, aside)
+                _antiderivative_by_zenith(hi, cos_hi, sin_hi, sunlight, k, up, ahead, aside)
+                - _antiderivative_by_zenith(lo, cos_lo, sin_lo, sunlight, k, up, ahead, aside)
             ) + far * (
-                _antiderivative_by_zenith(last, cos_last, sin_last, rings, k, up, ahead, aside)
-                - _antiderivative_by_zenith(_TWO_PI - lit, cos_lit, -sin_lit, rings, k, up, ahead, aside)
+                _antiderivative_by_zenith(last, cos_last, sin_last, sunlight, k, up, ahead, aside)
+                - _antiderivative_by_zenith(_TWO_PI - lit, cos_lit, -sin_lit, sunlight, k, up, ahead, aside)
             )
         else:
             mean = rings[_SUN_MEAN, k]
@@ -226,14 +223,39 @@ def reflected(nx: float, ny: float, nz: float, whole: bool, weighted: bool, ring
 
 
 @compiled_vectorised
+def reflected_to_whole(rings: Array, sunlight: Array | None) -> tuple[float, float]:
+    """Albedo factors, along local x and z, of plates that see the whole disc.
+
+    They are linear in the normal: nx times the first plus nz times the second. Arguments as in `reflected`.
+    """
+    along, up = 0.0, 0.0
+    for k in range(RINGS):
+        lit = rings[_LIT, k]
+        cos_lit = rings[_COS_LIT, k]
+        sin_lit = rings[_SIN_LIT, k]
+        cos_nadir = rings[_COS_NADIR, k]
+        sin_nadir = rings[_SIN_NADIR, k]
+        weight = 2.0 * rings[_WEIGHT, k]  # both halves of the sunlit arc are alike
+        if sunlight is not None:
+            along += weight * _antiderivative_by_zenith(lit, cos_lit, sin_lit, sunlight, k, 0.0, sin_nadir, 0.0)
+            up += weight * _antiderivative_by_zenith(lit, cos_lit, sin_lit, sunlight, k, cos_nadir, 0.0, 0.0)
+        else:
+            mean = rings[_SUN_MEAN, k]
+            swing = rings[_SUN_SWING, k]
+            along += weight * _antiderivative(lit, cos_lit, sin_lit, mean, swing, 0.0, sin_nadir, 0.0)
+            up += weight * _antiderivative(lit, cos_lit, sin_lit, mean, swing, cos_nadir, 0.0, 0.0)
+    return along, up
+
+
+@compiled_vectorised
 def zenith_increment(theta_deg: float) -> float:
     """Rise of the albedo with the local solar zenith angle, NASA/TM-2001-211221, fitted to 65 deg."""
     return theta_deg * (1.3798e-3 + theta_deg * (-2.1793e-5 + theta_deg * (6.0372e-8 + theta_deg * 4.9115e-9)))
 
 
 @compiled_vectorised
-def prepare_zenith(rings: Array) -> None:
-    """Add to `rings`, for each ring, sunlight times `zenith_increment` as a polynomial in the azimuth's cosine.
+def prepare_zenith(rings: Array, sunlight: Array) -> None:
+    """Fill `sunlight`: for each ring, sunlight times `zenith_increment` as a polynomial in the azimuth's cosine.
 
     It interpolates at Chebyshev nodes of the sunlit part. Where that part is short it is continued
     past the terminator, on which the product is smooth, since a short interval makes the
@@ -246,22 +268,22 @@ def prepare_zenith(rings: Array) -> None:
         middle = 0.5 * (1.0 + start)
         half = 0.5 * (1.0 - start)
         for j in range(DEGREE + 1):
-            rings[_ZENITH + j, k] = 0.0
+            sunlight[j, k] = 0.0
         for i in range(DEGREE + 1):
             cos_sun = mean + swing * (middle + half * _CHEBYSHEV[i])
             cos_sun = 1.0 if cos_sun > 1.0 else cos_sun
             cos_sun = -1.0 if cos_sun < -1.0 else cos_sun
             value = cos_sun * zenith_increment(_DEGREES * _arccos(cos_sun))
             for j in range(DEGREE + 1):
-                rings[_ZENITH + j, k] += _TO_POWERS[j, i] * value
+                sunlight[j, k] += _TO_POWERS[j, i] * value
         # From powers of (cos p - middle) / half to powers of cos p.
         scale = 1.0
         for j in range(1, DEGREE + 1):
             scale = scale / half
-            rings[_ZENITH + j, k] *= scale
+            sunlight[j, k] *= scale
         for j in range(DEGREE):
             for i in range(DEGREE - 1, j - 1, -1):
-                rings[_ZENITH + i, k] -= middle * rings[_ZENITH + i + 1, k]
+                sunlight[i, k] -= middle * sunlight[i + 1, k]
 
 
 @compiled
@@ -274,7 +296,7 @@ def planet_factors(
     radius_km: float,
     g_albedo: Array,
     g_ir: Array,
-    g_zenith: Array,
+    g_zenith: Array | None,
 ) -> None:
     """Fill the planet's factors for every time and face.
 
@@ -291,12 +313,10 @@ def planet_factors(
     radius_km : float
         Radius of the sphere that albedo and infrared leave.
     g_albedo, g_ir, g_zenith : ndarray (time, face)
-        Results; a `g_zenith` without rows is not computed.
+        Results. Without a `g_zenith` its part is not even compiled.
     """
     rings = np.empty((RING_ROWS, RINGS))
-    with_zenith = g_zenith.shape[0] > 0
-    kinds = 2 if with_zenith else 1  # plain, weighted
-    reflection = np.zeros(2)
+    sunlight = np.empty((DEGREE + 1, RINGS))
     whole = np.zeros((2, 2))
     x = np.empty(3)
     for i in range(position.shape[0]):
@@ -313,11 +333,10 @@ def planet_factors(
         whole_known = False
         if lit:
             prepare_rings(H, cos_zenith, rings)
-            if with_zenith:
-                prepare_zenith(rings)
+            if g_zenith is not None:
+                prepare_zenith(rings, sunlight)
         for f in range(normals.shape[0]):
-            infrared = 0.0
-            reflection[0], reflection[1] = 0.0, 0.0
+            infrared, albedo, zenith = 0.0, 0.0, 0.0
             for p in range(rotations.shape[1]):
                 m = rotations[i, p]
                 n0 = m[0, 0] * normals[f, 0] + m[0, 1] * normals[f, 1] + m[0, 2] * normals[f, 2]
@@ -332,26 +351,24 @@ def planet_factors(
                 infrared += weights[p] * plate_to_sphere(max(-1.0, min(1.0, nz)), H)
                 if not lit:
                     continue
-                # One variable for both calls below: a literal True or False would compile the ring loop twice.
-                in_full = nz * cos_disc >= horizontal * sin_disc
-                if not in_full:
-                    for kind in range(kinds):
-                        reflection[kind] += weights[p] * reflected(nx, ny, nz, in_full, kind == 1, rings)
+                if nz * cos_disc < horizontal * sin_disc:
+                    albedo += weights[p] * reflected(nx, ny, nz, rings, None)
+                    if g_zenith is not None:
+                        zenith += weights[p] * reflected(nx, ny, nz, rings, sunlight)
                     continue
                 # The whole disc is in view: the factor is linear in the normal, and one vector
                 # integral (no part of it along y) serves every such face of this instant.
                 if not whole_known:
-                    for kind in range(kinds):
-                        for axis in range(2):
-                            up = float(axis)
-                            whole[kind, axis] = reflected(1.0 - up, 0.0, up, in_full, kind == 1, rings)
+                    whole[0, 0], whole[0, 1] = reflected_to_whole(rings, None)
+                    if g_zenith is not None:
+                        whole[1, 0], whole[1, 1] = reflected_to_whole(rings, sunlight)
                     whole_known = True
-                for kind in range(kinds):
-                    reflection[kind] += weights[p] * (nx * whole[kind, 0] + nz * whole[kind, 1])
-            g_albedo[i, f] = max(reflection[0], 0.0)
+                albedo += weights[p] * (nx * whole[0, 0] + nz * whole[0, 1])
+                zenith += weights[p] * (nx * whole[1, 0] + nz * whole[1, 1])
+            g_albedo[i, f] = max(albedo, 0.0)
             g_ir[i, f] = infrared
-            if with_zenith:
-                g_zenith[i, f] = max(reflection[1], 0.0)
+            if g_zenith is not None:
+                g_zenith[i, f] = max(zenith, 0.0)
 
 
 @compiled

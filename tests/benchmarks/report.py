@@ -167,7 +167,7 @@ def _unit(v):
 
 def kernel_factors(position, sun, rotations):
     g_albedo, g_ir = np.empty((2, len(position), len(FACES)))
-    planet_factors(position, sun, rotations, np.ones(1), FACES, RADIUS_KM, g_albedo, g_ir, np.empty((0, len(FACES))))
+    planet_factors(position, sun, rotations, np.ones(1), FACES, RADIUS_KM, g_albedo, g_ir, None)
     return g_albedo, g_ir
 
 
