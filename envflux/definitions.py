@@ -10,7 +10,7 @@ import inspect
 import types
 from collections.abc import Iterator
 from datetime import UTC, datetime
-from typing import Annotated, Any, ClassVar, Literal, Union, get_args, get_origin
+from typing import Annotated, Any, ClassVar, Literal, Self, Union, get_args, get_origin
 
 import numpy as np
 from pydantic import BaseModel, BeforeValidator, ConfigDict, ValidationError
@@ -75,7 +75,7 @@ class Definition(BaseModel):
         )
 
     @classmethod
-    def from_table(cls, table: dict[str, Any]) -> Any:
+    def from_table(cls, table: dict[str, Any]) -> Self:
         """Build from a table of a mission file or from parsed JSON.
 
         Raises
@@ -93,7 +93,7 @@ class Definition(BaseModel):
         return self.model_dump_json(exclude_none=True)
 
     @classmethod
-    def from_json(cls, text: str) -> Any:
+    def from_json(cls, text: str) -> Self:
         """The declaration that `to_json` wrote."""
         try:
             return cls.model_validate_json(text)

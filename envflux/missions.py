@@ -295,11 +295,11 @@ def _coating(entry: Any, field: str) -> Coating:
     try:
         if identifier is None:
             table.setdefault("name", field.rpartition(".")[2])
-            return Coating.from_table(table)  # type: ignore[no-any-return]  # from_table gives its own class
+            return Coating.from_table(table)
         if not isinstance(identifier, str):
             raise InputError("catalogue", identifier, "an identifier in quotes, e.g. 'C025'")
         known = catalogue_coating(identifier)
-        return Coating.from_table({**dict(known), **table})  # type: ignore[no-any-return]  # as above
+        return Coating.from_table({**dict(known), **table})
     except InputError as error:
         raise error.inside(field) from None
 
