@@ -23,11 +23,13 @@ from envflux.fluxes import flux
 from envflux.orbits import CircularOrbit, UndatedOrbit
 from envflux.plots.drawing import shadow_spans
 from envflux.plots.series import _pushed_apart, _wrapped
+from envflux.plots.summaries import _number_inside
 from envflux.reductions import orbit_mean
 
 mpl.use("Agg")
 
 SMALLEST_TYPE_PT = 11  # common practice for slides, no source: smaller is not read from the back row
+SMALLEST_IN_BAR_PT = 10  # a narrow segment rather has a small number than none; common practice, no source
 COATING = Coating(absorptance=0.31, emittance=0.83)
 ENVIRONMENT = Environment(albedo=0.29, planetary_ir_w_m2=241)
 
@@ -76,7 +78,9 @@ def test_every_plot_can_be_read(ds: xr.Dataset, many_faces: xr.Dataset) -> None:
             renderer = figure.canvas.get_renderer()
             texts = [text for text in figure.findobj(mpl.text.Text) if text.get_text().strip()]
             texts = [text for text in texts if text.get_visible()]
-            assert min(text.get_fontsize() for text in texts) >= SMALLEST_TYPE_PT
+            for text in texts:
+                in_bar = text.get_text().replace(".", "").isdigit() and text.get_ha() == text.get_va() == "center"
+                assert text.get_fontsize() >= (SMALLEST_IN_BAR_PT if in_bar else SMALLEST_TYPE_PT), text.get_text()
             width, height = figure.canvas.get_width_height()
             boxes = []
             for text in texts:
@@ -132,6 +136,71 @@ def test_coinciding_curves_are_one_line_with_all_names(ds: xr.Dataset) -> None:
         ax = plots.flux_history(ds, component="planetary_ir")
     assert len(curves(ax)) == 3
     assert "+X, −X, +Y, −Y" in [text.get_text() for text in ax.texts]
+
+
+def looks(ax: Any) -> dict[str, tuple[Any, ...]]:
+    """Colour, dash and width of the piece of line beside each name."""
+    at = {piece.get_ydata()[0]: piece for piece in ax.lines if len(piece.get_xdata()) == 2}
+    beside = {text.get_text(): at.get(text.get_position()[1]) for text in ax.texts}
+    return {
+        name: (line.get_color(), line.get_linestyle(), line._unscaled_dash_pattern, line.get_linewidth())
+        for name, line in beside.items()
+        if line is not None
+    }
+
+
+def test_a_face_has_one_look_in_all_panels(ds: xr.Dataset) -> None:
+    with plots.off_screen():
+        panels = plots.flux_history(ds).ravel()
+    first = looks(panels[0])
+    assert sorted(first) == sorted(["+X", "−X", "+Y", "−Y", "+Z", "−Z"])
+    assert len(set(map(str, first.values()))) == 6
+    for panel in panels[1:]:
+        assert looks(panel) == first
+    # In the infrared the four side faces coincide: the curve looks like the first of them.
+    assert (curves(panels[2])[0].get_color(), curves(panels[2])[0].get_linestyle()) == first["+X"][:2]
+    assert len(curves(panels[2])) == 3
+
+
+def test_leaders_run_from_where_the_curves_end(ds: xr.Dataset) -> None:
+    with plots.off_screen():
+        panel = plots.flux_history(ds)[1, 0]
+    leader = next(line for line in panel.lines if np.isnan(line.get_ydata()).any())
+    points = np.asarray(leader.get_xydata(), float).reshape(-1, 3, 2)
+    low, high = panel.get_ylim()
+    end = (float(ds["planetary_ir_flux"].sel(face="+X")[-1]) - low) / (high - low)
+    ends = [height for height in points[:, 0, 1] if height == pytest.approx(end, abs=1e-12)]
+    assert len(ends) == 4  # one for each of the coinciding side faces
+    assert set(points[:, 1, 1]) <= {text.get_position()[1] for text in panel.texts}
+
+
+def test_many_revolutions_are_thin_and_undashed(ds: xr.Dataset) -> None:
+    orbit = CircularOrbit(altitude_km=560, inclination_deg=53, raan_deg=40, epoch="2031-03-20T06:00:00Z")
+    many = flux(orbit.track(revolutions=6), NadirPointing(), box_craft((1, 1, 1), COATING), ENVIRONMENT)
+    with plots.off_screen():
+        ax = plots.flux_history(many, component="solar_flux", against="orbit angle")
+        few = plots.flux_history(ds, component="solar_flux", against="orbit angle")
+    assert {line.get_linestyle() for line in curves(ax)} == {"-"}
+    assert max(line.get_linewidth() for line in curves(ax)) < min(line.get_linewidth() for line in curves(few))
+    assert {label.get_text() for label in ax.get_xticklabels()} == {"noon"}
+    assert {label.get_text() for label in few.get_xticklabels()} == {"0 (noon)", "180"}
+
+
+def test_facts_tell_orbit_attitude_surfaces_and_environment(ds: xr.Dataset) -> None:
+    with plots.off_screen():
+        said = [text.get_text() for text in plots.flux_history(ds)[0, 0].figure.texts]
+    (told,) = [text for text in said if "altitude 560 km" in text]
+    assert told.count("\n") == 1
+    for fact in ("nadir attitude", "BOL, nominal, cells loaded", "S 1361 at 1 au, albedo 0.29, IR 241 W m⁻²"):
+        assert fact in told.splitlines()[1]
+
+
+def test_small_segments_have_their_number_where_it_fits() -> None:
+    per_inch = 1.11 * 455 / 8  # an axis 8 inches wide
+    assert _number_inside(285.2, 455, per_inch) == ("285", 11)
+    assert _number_inside(12.8, 455, per_inch) == ("13", 10)
+    assert _number_inside(9.3, 455, per_inch) == ("9", 11)
+    assert _number_inside(0.4, 455, per_inch) is None
 
 
 def test_shade_spans_the_contacts(ds: xr.Dataset) -> None:

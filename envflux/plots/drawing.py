@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import textwrap
 from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager
@@ -28,9 +29,11 @@ SHADE = {"umbra": "#D4D7DC", "penumbra": "#E9EBEE"}
 INK = "#333333"
 
 TEXT, FACTS, PANEL, HEADLINE = 11, 12, 12.5, 15  # points; readable on a projected slide
-NAMES_FROM = 1.09  # names start here, in widths of their panel
+NAMES_FROM = 1.11  # names start here, in widths of their panel
+SINGLE_WIDTH = 10.0  # inches, of a figure of one panel
 MOST_LINES = 12  # more lines than this cannot be told apart in one panel
 
+DASHED_REVOLUTIONS = 4.0  # beyond these, dashes are shorter than what they are to show
 DPI = 150
 _BETWEEN = "  ·  "
 
@@ -71,9 +74,24 @@ def left_out_note(ds: xr.Dataset, shown: list[str]) -> str:
     return f"{len(shown)} of {count} faces drawn" if len(shown) < count else ""
 
 
-def line_style(index: int) -> dict[str, Any]:
-    """Give neighbours in the list, as +X and -X are, one hue and different dashes."""
-    return {"color": HUES[index // 2 % len(HUES)], "linestyle": DASHES[index % 2]}
+def line_style(index: int, *, dashed: bool = True) -> dict[str, Any]:
+    """Give neighbours in the list, as +X and -X are, one hue and different dashes, or else different tints."""
+    hue = HUES[index // 2 % len(HUES)]
+    if dashed:
+        return {"color": hue, "linestyle": DASHES[index % 2], "linewidth": 2.0}
+    return {"color": _paler(hue) if index % 2 else hue, "linestyle": "-", "linewidth": 1.0}
+
+
+def _paler(hue: str) -> str:
+    mixed = [(int(hue[i : i + 2], 16) + 255) // 2 for i in (1, 3, 5)]
+    return "#" + "".join(f"{part:02X}" for part in mixed)
+
+
+def revolutions(ds: xr.Dataset) -> float:
+    """How many revolutions the dataset spans; 0 where it knows no period."""
+    if "orbital_period" not in ds.coords:
+        return 0.0
+    return float(ds["elapsed"].values[-1] - ds["elapsed"].values[0]) / float(ds["orbital_period"])
 
 
 def shadow_spans(ds: xr.Dataset, x: Array) -> list[tuple[str, float, float]]:
@@ -120,7 +138,7 @@ def x_values(ds: xr.Dataset, against: XAxis) -> Array:
 def x_label(ds: xr.Dataset, against: XAxis) -> str:
     """Say what runs along the bottom, and from when."""
     if against == "orbit angle":
-        return "orbit angle from orbit noon, °"
+        return "orbit angle, ° from orbit noon"
     start = ds["time"].values[0]
     unit = _time_unit(ds)[1]
     if np.issubdtype(start.dtype, np.datetime64):
@@ -128,9 +146,15 @@ def x_label(ds: xr.Dataset, against: XAxis) -> str:
     return f"{unit} since orbit noon"
 
 
-def facts_line(ds: xr.Dataset, left_out: str = "", *, with_title: bool = True) -> str:
-    """Answer what a reviewer asks first: how high, how the Sun stands, how long the night is."""
-    words = [str(ds.attrs["title"])] if with_title and "title" in ds.attrs else []
+def facts(ds: xr.Dataset, left_out: str = "") -> list[list[str]]:
+    """Answer what a reviewer asks first: in which orbit, and then for which case, one list each."""
+    case = _case_facts(ds) + ([left_out] if left_out else [])
+    return [words for words in (_orbit_facts(ds), case) if words]
+
+
+def _orbit_facts(ds: xr.Dataset) -> list[str]:
+    """How high, how the Sun stands, how long the night is."""
+    words = []
     if "altitude" in ds:
         low, high = float(ds["altitude"].min()), float(ds["altitude"].max())
         middle = (low + high) / 2
@@ -152,9 +176,48 @@ def facts_line(ds: xr.Dataset, left_out: str = "", *, with_title: bool = True) -
         whole = [end - start for _, start, end in nights if start > elapsed[0] and end < elapsed[-1]]
         if whole:
             words.append(f"longest eclipse {max(whole) / 60:.1f} min")
-    if left_out:
-        words.append(left_out)
-    return _BETWEEN.join(words)
+    return words
+
+
+def _case_facts(ds: xr.Dataset) -> list[str]:
+    """How the craft is turned, how old its surfaces are, what shines on it: as far as the dataset knows."""
+    words = []
+    if "attitude" in ds.attrs:
+        words.append(_attitude_words(json.loads(ds.attrs["attitude"])))
+    if "surface_state" in ds.attrs:
+        words.append(_surface_words(str(ds.attrs["surface_state"])))
+    if "environment" in ds.attrs:
+        around = json.loads(ds.attrs["environment"])
+        albedo = around["albedo"]
+        share = f"{albedo:.2f}" if round(albedo, 2) == albedo else f"{albedo:g}"
+        words.append(
+            f"S {around['solar_constant_w_m2']:g} at 1 au, albedo {share}, IR {around['planetary_ir_w_m2']:g} W m⁻²"
+        )
+        if around.get("zenith_correction", "none") != "none":
+            words.append(f"zenith correction: {around['zenith_correction']}")
+    return words
+
+
+def _attitude_words(law: dict[str, Any]) -> str:
+    kind = str(law["kind"])
+    if kind == "spinning":
+        about = {"sun": "the Sun line", "inertial": "an inertial axis"}.get(law["about"], f"the {law['about']}")
+        return f"spinning at {law['rate_rpm']:g} rpm about {about}"
+    # A law of the user's own is known by the full name of its class.
+    words = textwrap.shorten(kind.rpartition(".")[2], 30, placeholder=" …") + " attitude"
+    if kind == "sun" and isinstance(law.get("axis"), str):
+        words += f", {minus(law['axis'])} to the Sun"
+    turns = {turn: float(law.get(f"{turn}_deg", 0.0)) for turn in ("roll", "pitch", "yaw")}
+    return words + "".join(minus(f", {turn} {angle:g}°") for turn, angle in turns.items() if angle)
+
+
+def _surface_words(surface_state: str) -> str:
+    """Shorten "age EOL, bound nominal, cells loaded" and what may follow to what differs from case to case."""
+    state = dict(entry.split(" ", 1) for entry in surface_state.split(", "))
+    bound = state["bound"]
+    if "bound_absorptance" in state or "bound_emittance" in state:
+        bound = f"a {state.get('bound_absorptance', bound)}, e {state.get('bound_emittance', bound)}"
+    return f"{state['age']}, {bound}, cells {state['cells']}"
 
 
 def long_name(ds: xr.Dataset, name: str) -> str:
@@ -210,7 +273,7 @@ def new_axes(width: float, height: float, rows: int = 1, columns: int = 1, *, sh
     return axes
 
 
-def place_panels(panels: Any, headline: str, facts: str) -> None:
+def place_panels(panels: Any, headline: str, told: list[list[str]]) -> None:
     """Give two by two panels their places, with room for the names right of each column, and a headline.
 
     What matplotlib's own layout finds by measuring every tick twice is known here beforehand, apart
@@ -220,7 +283,9 @@ def place_panels(panels: Any, headline: str, facts: str) -> None:
     figure.set_layout_engine("none")
     width, height = figure.get_size_inches()
     names = [max(_name_width(text) for ax in column for text in ax.texts) for column in panels.T]
-    left, right, top, gap, bottom = 0.85, 0.12, 1.08, 0.48, 0.62  # inches
+    lines, size = _fitted(told, width)
+    left, right, gap, bottom = 0.85, 0.12, 0.48, 0.62  # inches
+    top = 0.86 + 0.22 * max(len(lines), 1)
     across = max((width - 2 * left - sum(names) - right) / (2 * NAMES_FROM), 1.0)
     down = (height - top - gap - bottom) / 2
     for i, line in enumerate(panels):
@@ -232,37 +297,56 @@ def place_panels(panels: Any, headline: str, facts: str) -> None:
     figure.text(
         y=1 - 0.12 / height, s=_shortened(headline, width), fontsize=HEADLINE, weight="bold", color="black", **edge
     )
-    figure.text(y=1 - 0.43 / height, s=facts, fontsize=FACTS, color=INK, **edge)
+    figure.text(y=1 - 0.43 / height, s="\n".join(lines), fontsize=size, color=INK, linespacing=1.25, **edge)
 
 
 def _name_width(text: Any) -> float:
     """Width in inches, if it stands right of its panel."""
-    beside = text.get_position()[0] == NAMES_FROM
-    return float(text.get_window_extent().width) / float(text.figure.dpi) if beside else 0.0
+    if text.get_position()[0] != NAMES_FROM:
+        return 0.0
+    return float(text.get_window_extent().width) / float(text.figure.dpi)
 
 
-def figure_title(ax: Axes, headline: str, facts: str) -> None:
-    """Write the headline of the figure of `ax`, and the line of facts under it."""
+def figure_title(ax: Axes, what: str, title: str | None, ds: xr.Dataset, left_out: str = "") -> None:
+    """Write the headline of the figure of `ax`, and the facts under it.
+
+    The headline is `title`, or else the case and what is drawn; the axes say the latter, too, and where
+    there is no room for both the case is left.
+    """
     figure: Any = ax.figure
+    width = figure.get_size_inches()[0]
     figure.get_layout_engine().set(w_pad=0.14, h_pad=0.10, hspace=0.03, wspace=0.03)
-    lines = _fitted(facts, figure.get_size_inches()[0])
+    lines, size = _fitted(facts(ds, left_out), width)
     # The blank lines keep the room in which the facts are then written, smaller.
-    room = _shortened(headline, figure.get_size_inches()[0]) + "\n " * len(lines)
+    room = _headline(what, title, ds, width) + "\n " * len(lines)
     heading = figure.suptitle(room, fontsize=HEADLINE, x=0.012, ha="left", weight="bold", color="black")
     place: dict[str, Any] = {"ha": "left", "va": "bottom", "annotation_clip": False}
-    note = ax.annotate("\n".join(lines), (0.0, 0.0), xycoords=heading, fontsize=FACTS, color=INK, **place)
+    note = ax.annotate("\n".join(lines), (0.0, 0.0), xycoords=heading, fontsize=size, color=INK, **place)
     note.set_in_layout(False)
 
 
-def _fitted(facts: str, width_in: float) -> list[str]:
-    """Split facts over as many lines as the width asks for, none of them broken."""
-    lines: list[str] = []
-    for fact in facts.split(_BETWEEN):
-        if lines and len(lines[-1]) + len(_BETWEEN) + len(fact) <= 11 * width_in:
+def _headline(what: str, title: str | None, ds: xr.Dataset, width_in: float) -> str:
+    case = str(ds.attrs.get("title", ""))
+    if title is not None or not case:
+        return _shortened(title or what, width_in)
+    both = f"{case}: {what[:1].lower()}{what[1:]}"
+    return both if _shortened(both, width_in) == both else _shortened(case, width_in)
+
+
+def _fitted(told: list[list[str]], width_in: float) -> tuple[list[str], float]:
+    """Lay facts out, none of them broken: a line for each list, or smaller and run on, so that two lines do."""
+    for size in (FACTS, TEXT):
+        room = 11 * width_in * FACTS / size  # characters
+        lines = [_BETWEEN.join(words) for words in told]
+        if all(len(line) <= room for line in lines):
+            return lines, size
+    lines = []
+    for fact in [fact for words in told for fact in words]:
+        if lines and len(lines[-1]) + len(_BETWEEN) + len(fact) <= room:
             lines[-1] += _BETWEEN + fact
         else:
             lines.append(fact)
-    return lines
+    return lines, TEXT
 
 
 def _shortened(headline: str, width_in: float) -> str:

@@ -14,10 +14,10 @@ from envflux.plots.drawing import (
     HUES,
     INK,
     SHORT,
+    SINGLE_WIDTH,
     TEXT,
     chosen_faces,
     dress,
-    facts_line,
     figure_title,
     minus,
     new_axes,
@@ -31,6 +31,11 @@ from envflux.vectors import AXES
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
+
+
+_ROOM = 1.11  # the bars' axis in lengths of the longest bar: its number stands beyond its end
+_BARS_WIDTH = 12.0  # inches: narrow segments hold their numbers
+_SMALLEST = 10.0  # points, of a number in a segment that holds no larger one
 
 
 def orbit_mean_bars(
@@ -69,22 +74,36 @@ def orbit_mean_bars(
         weights = {"planetary_ir_flux": means["emittance"].values}
         parts = {name: values * weights.get(name, means["absorptance"].values) for name, values in parts.items()}
     own_figure = ax is None
-    ax = ax if ax is not None else new_axes(9.0, max(5.0, 2.0 + 0.36 * len(names)))
+    ax = ax if ax is not None else new_axes(_BARS_WIDTH, max(5.0, 2.0 + 0.36 * len(names)))
     rows = list(range(len(names)))
     left = np.zeros(len(names))
     reach = max(float(sum(parts.values()).max()), 1e-9)  # type: ignore[union-attr]  # never an empty sum
+    across_in = float(ax.get_window_extent().width) / ax.figure.dpi
+    if own_figure:  # it will be laid out anew around the names
+        across_in = _BARS_WIDTH - 0.8 - 0.65 * TEXT / 72 * max(map(len, names))
+    per_inch = _ROOM * reach / max(across_in, 1.0)
     for name, values in parts.items():
         ax.barh(rows, values, left=left, height=0.72, color=COMPONENT_HUES[name], label=SHORT[name])
         for row, value in zip(rows, values, strict=True):
-            words = number(value, reach)
-            if value > (0.018 * len(words) + 0.01) * reach:  # narrower segments cannot hold their number
-                ax.text(left[row] + value / 2, row, words, ha="center", va="center", fontsize=TEXT, color="black")
+            said = _number_inside(value, reach, per_inch)
+            if said:
+                ax.text(left[row] + value / 2, row, said[0], ha="center", va="center", fontsize=said[1], color="black")
         left = left + values
+    paper = {"facecolor": "white", "edgecolor": "none", "pad": 0.5}  # no grid line runs through a number
     for row, total in zip(rows, left, strict=True):
-        ax.text(total + 0.012 * reach, row, number(total, reach), ha="left", va="center", fontsize=TEXT, weight="bold")
+        ax.text(
+            total + 0.012 * reach,
+            row,
+            number(total, reach),
+            ha="left",
+            va="center",
+            fontsize=TEXT,
+            weight="bold",
+            bbox=paper,
+        )
     ax.set_yticks(rows, [minus(name) for name in names])
     ax.invert_yaxis()
-    ax.set_xlim(0, 1.11 * reach)
+    ax.set_xlim(0, _ROOM * reach)
     dress(ax, grid="x")
     kind = "absorbed flux" if absorbed else "incident flux"
     ax.set_xlabel(f"orbit mean of {kind}, {pretty_units(means['solar_flux'])}", fontsize=TEXT)
@@ -93,8 +112,20 @@ def orbit_mean_bars(
         columnspacing=1.2, borderaxespad=0.2,
     )  # fmt: skip
     if own_figure:
-        figure_title(ax, title or f"Orbit mean of the {kind} on each face", facts_line(ds))
+        figure_title(ax, f"Orbit mean of {kind}", title, ds)
     return ax
+
+
+def _number_inside(value: float, reach: float, per_inch: float) -> tuple[str, float] | None:
+    """Find what to write of `value` into its segment, and how large; nothing where nothing fits."""
+    candidates = [(number(value, reach), float(TEXT))]
+    if value >= 0.95:  # a smaller one would be rounded away
+        candidates += [(f"{value:.0f}", float(TEXT)), (f"{value:.0f}", _SMALLEST)]
+    for words, size in candidates:
+        ems = sum(0.32 if sign == "." else 0.64 for sign in words)  # widths in DejaVu Sans
+        if value / per_inch > ems * size / 72 + 0.015:
+            return words, size
+    return None
 
 
 def eclipse_strip(track: xr.Dataset, ax: Axes | None = None, *, title: str | None = None) -> Axes:
@@ -120,7 +151,7 @@ def eclipse_strip(track: xr.Dataset, ax: Axes | None = None, *, title: str | Non
     own_figure = ax is None
     rev = np.asarray(track["rev"].values, int)
     count = int(rev.max()) + 1
-    ax = ax if ax is not None else new_axes(9.0, float(np.clip(2.2 + 0.3 * count, 3.0, 9.0)))
+    ax = ax if ax is not None else new_axes(SINGLE_WIDTH, float(np.clip(2.2 + 0.3 * count, 3.0, 9.0)))
     minutes = np.asarray(track["elapsed"].values, float) / 60.0
     period = float(track["orbital_period"]) / 60.0
     for name, start, end in shadow_spans(track, minutes):
@@ -135,11 +166,13 @@ def eclipse_strip(track: xr.Dataset, ax: Axes | None = None, *, title: str | Non
     ax.set_ylim(count - 0.4, -0.6)
     ax.set_xlim(0, period)
     dress(ax, grid=None)
-    ax.yaxis.set_major_locator(MaxNLocator(integer=True))
+    ax.yaxis.set_major_locator(MaxNLocator(integer=True, min_n_ticks=1))
     ax.set_ylabel("revolution", fontsize=TEXT)
-    ax.set_xlabel("minutes since the start of the revolution", fontsize=TEXT)
+    ax.set_xlabel(
+        "minutes since the start of the revolution; yellow: sunlight, grey: penumbra and umbra", fontsize=TEXT
+    )
     if own_figure:
-        figure_title(ax, title or "Sunlight (yellow), penumbra and umbra (grey)", facts_line(track))
+        figure_title(ax, "Sunlight and eclipse, one strip for each revolution", title, track)
     return ax
 
 
@@ -167,7 +200,7 @@ def sun_in_body(ds: xr.Dataset, ax: Axes | None = None, *, title: str | None = N
     if "sun_azimuth" not in ds:
         raise InputError("ds", "without sun_azimuth", "what flux returns for an attitude not averaged over a spin")
     own_figure = ax is None
-    ax = ax if ax is not None else new_axes(9.0, 5.0)
+    ax = ax if ax is not None else new_axes(SINGLE_WIDTH, 5.0)
     azimuth = np.asarray(ds["sun_azimuth"].values, float)
     elevation = np.asarray(ds["sun_elevation"].values, float)
     azimuth = (azimuth + 180.0) % 360.0 - 180.0
@@ -196,5 +229,5 @@ def sun_in_body(ds: xr.Dataset, ax: Axes | None = None, *, title: str | None = N
     ax.set_ylabel("elevation toward +Z, °", fontsize=TEXT)
     ax.legend(loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=2, frameon=False, fontsize=TEXT)
     if own_figure:
-        figure_title(ax, title or "The Sun in body axes", facts_line(ds))
+        figure_title(ax, "The Sun in body axes", title, ds)
     return ax
