@@ -2,7 +2,8 @@
 
 Each function takes a dataset, draws on the Axes it is given or on a new figure, and returns the
 Axes. Lines are named where they end, in place of a legend to be looked up; opposite faces share a
-colour and differ by their dashes (by their tints over many revolutions), so that the figure also reads in grey or with colour blindness.
+colour and differ by their dashes, or by their tints over many revolutions, so that the figure also
+reads in grey or with colour blindness.
 """
 
 from envflux.plots.drawing import off_screen

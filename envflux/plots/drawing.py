@@ -282,7 +282,9 @@ def place_panels(panels: Any, headline: str, told: list[list[str]]) -> None:
     figure = panels[0, 0].figure
     figure.set_layout_engine("none")
     width, height = figure.get_size_inches()
-    names = [max(_name_width(text) for ax in column for text in ax.texts) for column in panels.T]
+    # Most names stand beside both panels of a column: each is measured once.
+    different = [{text.get_text(): text for ax in column for text in ax.texts}.values() for column in panels.T]
+    names = [max(map(_name_width, texts)) for texts in different]
     lines, size = _fitted(told, width)
     left, right, gap, bottom = 0.85, 0.12, 0.48, 0.62  # inches
     top = 0.86 + 0.22 * max(len(lines), 1)

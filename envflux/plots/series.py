@@ -179,7 +179,10 @@ def _styles(ds: xr.Dataset, shown: list[str], components: Sequence[str]) -> list
 
 
 def _values(ds: xr.Dataset, name: str, faces: Sequence[str]) -> dict[str, Array]:
-    return {face: np.asarray(ds[name].sel(face=face).values, float) for face in faces}
+    # Plain indexing: selecting face by face by label would take a tenth of the drawing's time.
+    column = {str(face): index for index, face in enumerate(ds["face"].values)}
+    values = np.asarray(ds[name].transpose("face", "time").values, float)
+    return {face: values[column[face]] for face in faces}
 
 
 def _top(values: dict[str, Array]) -> float:

@@ -34,7 +34,7 @@ if TYPE_CHECKING:
 
 
 _ROOM = 1.11  # the bars' axis in lengths of the longest bar: its number stands beyond its end
-_BARS_WIDTH = 12.0  # inches: narrow segments hold their numbers
+_BARS_WIDTH = 11.0  # inches: narrow segments hold their numbers
 _SMALLEST = 10.0  # points, of a number in a segment that holds no larger one
 
 
@@ -89,7 +89,6 @@ def orbit_mean_bars(
             if said:
                 ax.text(left[row] + value / 2, row, said[0], ha="center", va="center", fontsize=said[1], color="black")
         left = left + values
-    paper = {"facecolor": "white", "edgecolor": "none", "pad": 0.5}  # no grid line runs through a number
     for row, total in zip(rows, left, strict=True):
         ax.text(
             total + 0.012 * reach,
@@ -99,7 +98,6 @@ def orbit_mean_bars(
             va="center",
             fontsize=TEXT,
             weight="bold",
-            bbox=paper,
         )
     ax.set_yticks(rows, [minus(name) for name in names])
     ax.invert_yaxis()
