@@ -227,7 +227,7 @@ def _uniform_angle(tai_us: Microseconds) -> Array:
 def _gmst_1982(tai_us: Microseconds, ut1_minus_tai_s: Array) -> Array:
     """Greenwich mean sidereal angle of 1982, the one SGP4's frame is built on, in radians.
 
-    Aoki et al., *Astronomy and Astrophysics* 105, 359 (1982), equation 14.
+    Aoki et al., *Astronomy and Astrophysics* 105, 359 (1982), equation 14 (cited from memory).
     """
     seconds = (tai_us - _J2000_US) / _SECOND_US + ut1_minus_tai_s
     T = seconds / (86_400.0 * 36_525.0)

@@ -53,7 +53,8 @@ def angle_between(a: ArrayLike, b: ArrayLike) -> Array:
     """Angle in radians, accurate also near 0 and pi.
 
     Uses ``2 atan2(|u - v|, |u + v|)`` on the unit vectors (Kahan, *How Futile are Mindless
-    Assessments of Roundoff in Floating-Point Computation?*, 2006, section 12).
+    Assessments of Roundoff in Floating-Point Computation?*, 2006, section 12; cited from
+    memory).
     """
     u, v = unit(a), unit(b)
     return 2.0 * np.arctan2(norm(u - v), norm(u + v))

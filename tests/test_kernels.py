@@ -17,6 +17,7 @@ from hypothesis import strategies as st
 from scipy.spatial.transform import Rotation
 
 from envflux.environments import albedo_zenith_increment
+from envflux.kernels import planet
 from envflux.kernels.direct import spin_average, sun_factors
 from envflux.kernels.planet import planet_factors, plate_to_sphere, zenith_increment
 from envflux.shadows import visible_fraction
@@ -329,3 +330,10 @@ def test_kernels_compile_where_nothing_can_be_written(tmp_path):
     environment.pop("NUMBA_CACHE_DIR", None)
     done = subprocess.run([sys.executable, "-c", program], env=environment, capture_output=True, text=True, check=False)
     assert done.returncode == 0, done.stderr
+
+
+def test_polynomial_arccosine_is_as_good_as_published():
+    # Abramowitz and Stegun 4.4.46 states 2e-8, to one digit (from memory); 2.18e-8 is found.
+    x = np.concatenate([np.linspace(-1.0, 1.0, 20_001), 1.0 - np.logspace(-16, -2, 200)])
+    error = np.array([planet._arccos(value) for value in x]) - np.arccos(x)
+    assert np.abs(error).max() < 2.3e-8

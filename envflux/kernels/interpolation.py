@@ -33,7 +33,7 @@ def interpolate_six(
 
     References
     ----------
-    Abramowitz and Stegun, *Handbook of Mathematical Functions* (1964), 25.2.21 (six-point formula).
+    Abramowitz and Stegun, *Handbook of Mathematical Functions* (1964), 25.2.21 (six-point formula; cited from memory).
     """
     for i in range(times_us.size):
         node = times_us[i] // step_us

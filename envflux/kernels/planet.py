@@ -81,7 +81,10 @@ def plate_to_sphere(cos_tilt: float, H: float) -> float:
 
 @compiled_vectorised
 def _arccos(x: float) -> float:
-    """Arccosine to 2e-8 rad; Abramowitz and Stegun, *Handbook of Mathematical Functions*, 4.4.46."""
+    """Arccosine to 2.2e-8 rad.
+
+    Abramowitz and Stegun, *Handbook of Mathematical Functions*, 4.4.46 (from memory; the error is measured in a test).
+    """
     y = abs(x)
     p = -0.0012624911 * y + 0.0066700901
     p = p * y - 0.0170881256

@@ -86,7 +86,7 @@ def find_contacts(states: States, scan_us: Microseconds, shadow: Shadow, begin_u
     References
     ----------
     Roots: Chandrupatla, *Advances in Engineering Software* 28, 145 (1997). Minima: golden section
-    (Kiefer, *Proceedings of the American Mathematical Society* 4, 502 (1953)).
+    (Kiefer, *Proceedings of the American Mathematical Society* 4, 502 (1953)). Both cited from memory.
     """
     gap, sun = gap_at(states, scan_us, shadow)
     i = _grazing(gap, sun)

@@ -73,7 +73,7 @@ def secular_rates(
     References
     ----------
     Kozai, *Astronomical Journal* 64, 367 (1959); Vallado, *Fundamentals of Astrodynamics and
-    Applications*, 4th ed. (2013), section 9.6.1.
+    Applications*, 4th ed. (2013), section 9.6.1. Both cited from memory.
     """
     n = mean_motion_rad_s(semi_major_axis_km, planet)
     if not j2:

@@ -104,7 +104,8 @@ def flux_history(
             words = long_name(ds, name)
             single.set_ylabel(f"{words[:1].lower()}{words[1:]}, {pretty_units(ds[name])}", fontsize=TEXT)
             figure_title(single, f"{words} on each face", title, ds, left_out_note(ds, shown))
-        return single  # type: ignore[no-any-return]  # Any stands for an Axes here
+        drawn: Axes = single
+        return drawn
     panels: Panels
     if ax is None:
         panels = new_axes(13.33, 7.5, rows=2, columns=2, sharex=True)

@@ -77,7 +77,7 @@ def orbit_mean_bars(
     ax = ax if ax is not None else new_axes(_BARS_WIDTH, max(5.0, 2.0 + 0.36 * len(names)))
     rows = list(range(len(names)))
     left = np.zeros(len(names))
-    reach = max(float(sum(parts.values()).max()), 1e-9)  # type: ignore[union-attr]  # never an empty sum
+    reach = max(float(np.sum(list(parts.values()), axis=0).max()), 1e-9)
     across_in = float(ax.get_window_extent().width) / ax.figure.dpi
     if own_figure:  # it will be laid out anew around the names
         across_in = _BARS_WIDTH - 0.8 - 0.65 * TEXT / 72 * max(map(len, names))
